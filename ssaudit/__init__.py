@@ -1,0 +1,3 @@
+"""Bulk stability audit of gain-scheduled state-space models."""
+
+__version__ = "0.1.0"

@@ -1,0 +1,1 @@
+"""From an export to a bank: one reader a format, and the checks."""

@@ -1,0 +1,1 @@
+"""How the models are closed: gains, schedules, and the closing itself."""

@@ -1,0 +1,96 @@
+"""Closing the models: stacked A, B, C, D and gains to the closed-loop state matrices."""
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ssaudit.modes.poles import isolate
+
+Array = NDArray[np.float64]
+# I - σKD counts as singular when its reciprocal condition number is below this many units of
+# roundoff a row: the closed loop would have no correct digit.
+SINGULAR_ROUNDOFFS = 4.0
+
+
+def close_state_feedback(A: Array, B: Array, K: Array, sign: int) -> Array:
+    """Closed-loop state matrices A + σ B K of models under u = σ K x.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        State matrices.
+    B : (points, n, inputs) float
+        Input matrices.
+    K : (points, inputs, n) or (1, inputs, n) float
+        Gains.
+    sign : int
+        σ: -1 for u = -K x, +1 for u = +K x.
+
+    Returns
+    -------
+    (points, n, n) float
+
+    Examples
+    --------
+    >>> close_state_feedback(np.array([[[1.0]]]), np.array([[[2.0]]]), np.array([[[3.0]]]), -1)
+    array([[[-5.]]])
+    """
+    feedback = np.matmul(B, K)
+    return np.add(A, feedback) if sign > 0 else np.subtract(A, feedback)
+
+
+def close_output_feedback(
+    A: Array, B: Array, C: Array, D: Array, K: Array, sign: int
+) -> tuple[Array, NDArray[np.bool_]]:
+    """Closed-loop state matrices of models under u = σ K y, y = C x + D u.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        State matrices.
+    B : (points, n, inputs) float
+        Input matrices.
+    C : (points, outputs, n) float
+        Output matrices.
+    D : (points, outputs, inputs) float
+        Feedthrough matrices.
+    K : (points, inputs, outputs) or (1, inputs, outputs) float
+        Gains.
+    sign : int
+        σ: -1 for u = -K y, +1 for u = +K y.
+
+    Returns
+    -------
+    closed : (points, n, n) float
+        A + σ B (I - σ K D)⁻¹ K C; NaN where the algebraic loop is ill-posed.
+    ill_posed : (points,) bool
+        Where I - σ K D is singular to working precision.
+
+    References
+    ----------
+    Well-posedness of feedback: Zhou, Doyle & Glover, Robust and Optimal Control (1996), Lemma 5.1
+    (from memory).
+
+    Examples
+    --------
+    >>> one = np.ones((1, 1, 1))
+    >>> close_output_feedback(-one, one, one, one, one, -1)
+    (array([[[-1.5]]]), array([False]))
+    """
+    if not np.any(D):
+        return close_state_feedback(A, B, np.matmul(K, C), sign), np.zeros(len(A), dtype=bool)
+    loop = np.eye(B.shape[2]) - sign * np.matmul(K, D)
+    ill_posed = _singular(loop)
+    commanded = np.broadcast_to(np.matmul(K, C), (len(A), B.shape[2], A.shape[2]))
+    safe = np.where(ill_posed[:, np.newaxis, np.newaxis], np.eye(B.shape[2]), loop)
+    (effective,), failed = isolate(lambda m, r: (np.linalg.solve(m, r),), safe, commanded)
+    ill_posed = ill_posed | failed
+    effective[ill_posed] = np.nan
+    return close_state_feedback(A, B, effective, sign), ill_posed
+
+
+def _singular(loop: Array) -> NDArray[np.bool_]:
+    """Where a stack of small matrices is singular to working precision, whatever their scale."""
+    values = np.linalg.svd(loop, compute_uv=False)
+    smallest, largest = values[:, -1], np.maximum(values[:, 0], 1.0)
+    limit = SINGULAR_ROUNDOFFS * loop.shape[-1] * np.finfo(float).eps
+    return np.asarray(~(smallest > limit * largest))

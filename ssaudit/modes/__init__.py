@@ -1,0 +1,1 @@
+"""Poles in bulk, their quantities, participation and trust."""

@@ -1,0 +1,99 @@
+"""What engineers ask of a pole: damping ratio, natural frequency, time constant."""
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+def continuous_poles(z: NDArray[np.complex128], dt: float) -> NDArray[np.complex128]:
+    """Continuous equivalent log(z)/dt of the poles of sampled models.
+
+    Parameters
+    ----------
+    z : (...) complex
+        Poles of the sampled models.
+    dt : float
+        Sampling time [s], positive.
+
+    Returns
+    -------
+    s : (...) complex
+        Equivalent poles [1/s]. z = 0 (gone within a sample) becomes -inf; a pole on the negative
+        real axis gets the imaginary part pi/dt, half the sampling rate.
+
+    Examples
+    --------
+    >>> continuous_poles(np.array([np.exp(-0.5 + 1j), 0.0]), 0.1).round(6)
+    array([ -5.+10.j, -inf +0.j])
+    """
+    with np.errstate(divide="ignore"):
+        real = np.log(np.abs(z)) / dt
+    s: NDArray[np.complex128] = np.empty(np.shape(z), dtype=np.complex128)
+    s.real, s.imag = real, np.angle(z) / dt
+    return s
+
+
+def natural_frequency(s: NDArray[np.complex128]) -> NDArray[np.float64]:
+    """Undamped natural frequency ω_n = abs(s) [rad/s] of poles [1/s].
+
+    Parameters
+    ----------
+    s : (...) complex
+        Poles [1/s].
+
+    Returns
+    -------
+    (...) float
+        Natural frequency [rad/s]; of a real pole its distance from the origin.
+
+    Examples
+    --------
+    >>> natural_frequency(np.array([-3 + 4j]))
+    array([5.])
+    """
+    return np.abs(s)
+
+
+def damping_ratio(s: NDArray[np.complex128]) -> NDArray[np.float64]:
+    """Damping ratio ζ = -Re s / abs(s) of poles; a pole at s = 0 has none.
+
+    Parameters
+    ----------
+    s : (...) complex
+        Poles [1/s].
+
+    Returns
+    -------
+    (...) float
+        Between -1 and 1; NaN at s = 0. A real pole has 1 (decaying) or -1 (growing).
+
+    Examples
+    --------
+    >>> damping_ratio(np.array([-3 + 4j, 0, 2]))
+    array([ 0.6,  nan, -1. ])
+    """
+    with np.errstate(invalid="ignore", divide="ignore"):
+        ratio = -s.real / np.abs(s)
+    return np.where(np.isinf(s.real), -np.sign(s.real), ratio)
+
+
+def time_constant(s: NDArray[np.complex128]) -> NDArray[np.float64]:
+    """Time constant τ = -1 / Re s [s]: the time in which a mode decays by a factor of e.
+
+    Parameters
+    ----------
+    s : (...) complex
+        Poles [1/s].
+
+    Returns
+    -------
+    (...) float
+        Positive for decaying modes, negative for growing ones (the time to grow by e),
+        +inf on the imaginary axis.
+
+    Examples
+    --------
+    >>> time_constant(np.array([-4 + 1j, 0.5, 2j]))
+    array([ 0.25, -2.  ,   inf])
+    """
+    with np.errstate(divide="ignore"):
+        return np.where(s.real == 0, np.inf, -1.0 / s.real)
