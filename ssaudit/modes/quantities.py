@@ -28,7 +28,8 @@ def continuous_poles(z: NDArray[np.complex128], dt: float) -> NDArray[np.complex
     with np.errstate(divide="ignore"):
         real = np.log(np.abs(z)) / dt
     s: NDArray[np.complex128] = np.empty(np.shape(z), dtype=np.complex128)
-    s.real, s.imag = real, np.angle(z) / dt
+    # Adding zero turns -0 into 0, so that a negative real z gets +pi/dt, never -pi/dt.
+    s.real, s.imag = real, np.arctan2(z.imag + 0.0, z.real) / dt
     return s
 
 

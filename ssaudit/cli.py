@@ -1,0 +1,328 @@
+"""The command line: arguments → one library call → a report and an exit code."""
+
+import argparse
+import os
+import sys
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, NoReturn
+
+from ssaudit import __version__
+from ssaudit.errors import SsauditError
+
+if TYPE_CHECKING:
+    from rich.console import RenderableType
+
+    from ssaudit.auditing import Progress
+
+OK, NOT_OK, CANNOT_RUN, INTERRUPTED = 0, 1, 2, 130
+# Where the width of the output is not known, as in a file.
+WIDTH = 100
+
+
+class _Parser(argparse.ArgumentParser):
+    """Says what is wrong with the arguments in one line."""
+
+    def error(self, message: str) -> NoReturn:
+        self.exit(CANNOT_RUN, f"{self.prog}: {message}; see {self.prog} --help\n")
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run a command.
+
+    Parameters
+    ----------
+    arguments : sequence of str, optional
+        As after ``ssaudit``; those of the process when absent.
+
+    Returns
+    -------
+    int
+        0: all ok; 1: finished, and something is not ok; 2: could not run; 130: interrupted.
+    """
+    options = _parser().parse_args(arguments)
+    # Workers share the cores among them; more threads inside each would only contend. It has to
+    # be set before numpy is first imported.
+    for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+        os.environ.setdefault(name, "1")
+    command: Callable[[argparse.Namespace], int] = options.command
+    try:
+        return command(options)
+    except SsauditError as error:
+        print(f"ssaudit: {error}", file=sys.stderr)
+        return CANNOT_RUN
+    except KeyboardInterrupt:
+        print("ssaudit: interrupted", file=sys.stderr)
+        return INTERRUPTED
+    except BrokenPipeError:
+        # The reader of the output has gone; writing the rest at exit would fail again.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return CANNOT_RUN
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = _Parser(
+        prog="ssaudit",
+        description="Close gain-scheduled state-space models at every operating point, judge their "
+        "stability, and keep a record that revisions can be compared in.",
+        epilog="Exit: 0 all points ok; 1 finished, and some point is not ok (drift: something got "
+        "worse); 2 could not run; 130 interrupted.",
+    )
+    parser.add_argument("--version", action="version", version=f"ssaudit {__version__}")
+    commands = parser.add_subparsers(metavar="COMMAND", required=True, parser_class=_Parser)
+    _add_ingest(commands)
+    _add_audit(commands)
+    _add_drift(commands)
+    _add_trend(commands)
+    _add_run(commands)
+    return parser
+
+
+def _add(commands: Any, name: str, command: Callable[[argparse.Namespace], int], help: str) -> Any:
+    parser = commands.add_parser(name, help=help, description=help[0].upper() + help[1:] + ".")
+    parser.set_defaults(command=command)
+    return parser
+
+
+def _add_ingest(commands: Any) -> None:
+    parser = _add(commands, "ingest", _ingest, "take exports in and write them as one bank")
+    parser.add_argument("sources", nargs="+", metavar="SOURCE", help="file, folder or pattern")
+    parser.add_argument("--revision", required=True, metavar="R", help="name of the model revision")
+    parser.add_argument("--bank", required=True, type=Path, metavar="OUT.h5", help="bank to write")
+    parser.add_argument(
+        "--layout", type=Path, metavar="L.toml", help="where in the export what lies"
+    )
+
+
+def _add_audit(commands: Any) -> None:
+    parser = _add(commands, "audit", _audit, "close all models of a bank and judge every point")
+    parser.add_argument("bank", type=Path, metavar="BANK", help="bank that ingest wrote")
+    parser.add_argument("--loop", required=True, type=Path, metavar="L.toml", help="how to close")
+    parser.add_argument(
+        "--criteria", required=True, type=Path, metavar="C.toml", help="what to judge by"
+    )
+    parser.add_argument("--ledger", type=Path, metavar="DIR", help="log the run in this ledger")
+    parser.add_argument(
+        "--depth",
+        choices=("poles", "modes"),
+        default="modes",
+        help="poles: the fast look; modes (default): vectors, participation, trust",
+    )
+    _add_worst(parser)
+    _add_json(parser)
+    parser.add_argument("--csv", type=Path, metavar="FILE", help="write the points table as CSV")
+    parser.add_argument(
+        "--workers", type=_positive, metavar="N", help="worker threads (default: one a processor)"
+    )
+
+
+def _add_drift(commands: Any) -> None:
+    parser = _add(commands, "drift", _drift, "compare two runs of a ledger point by point")
+    parser.add_argument("ledger", type=Path, metavar="LEDGER", help="the ledger")
+    parser.add_argument("--from", required=True, dest="before", metavar="REV_OR_RUN")
+    parser.add_argument("--to", required=True, dest="after", metavar="REV_OR_RUN")
+    parser.add_argument(
+        "--tolerance",
+        type=_share,
+        metavar="SHARE",
+        help="share of each coordinate's range within which coordinates are the same "
+        "(default 1e-9)",
+    )
+    _add_worst(parser)
+    _add_json(parser)
+
+
+def _add_trend(commands: Any) -> None:
+    parser = _add(commands, "trend", _trend, "show how the revisions of a ledger compare")
+    parser.add_argument("ledger", type=Path, metavar="LEDGER", help="the ledger")
+
+
+def _add_run(commands: Any) -> None:
+    parser = _add(commands, "run", _run, "run a pipeline: ingest, audit and compare revisions")
+    parser.add_argument("pipeline", type=Path, metavar="PIPELINE.toml", help="the pipeline file")
+    _add_worst(parser)
+
+
+def _add_worst(parser: Any) -> None:
+    parser.add_argument(
+        "--worst", type=_natural, default=5, metavar="N", help="points to list (default 5)"
+    )
+
+
+def _add_json(parser: Any) -> None:
+    parser.add_argument(
+        "--json", metavar="FILE", help="write the findings as JSON; - prints them and nothing else"
+    )
+
+
+def _natural(text: str) -> int:
+    value = int(text) if text.isdecimal() else -1
+    if value < 0:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a whole number from 0")
+    return value
+
+
+def _positive(text: str) -> int:
+    if _natural(text) == 0:
+        raise argparse.ArgumentTypeError("0 is too few")
+    return int(text)
+
+
+def _share(text: str) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        value = -1.0
+    if not 0 <= value < 1:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a share from 0 to 1")
+    return value
+
+
+def _ingest(options: argparse.Namespace) -> int:
+    from ssaudit.intake.ingest import ingest
+    from ssaudit.report.intake_text import intake_text
+
+    with _progress() as progress:
+        intake = ingest(
+            options.sources,
+            revision=options.revision,
+            bank=options.bank,
+            layout=options.layout,
+            progress=progress,
+        )
+    _show(intake_text(intake))
+    return OK
+
+
+def _audit(options: argparse.Namespace) -> int:
+    from ssaudit.bank_file import read_bank
+    from ssaudit.criteria import read_criteria
+    from ssaudit.loop.files import read_loop
+    from ssaudit.stages import stream_audit
+
+    _refuse_overwriting((options.bank, options.loop, options.criteria), options.json, options.csv)
+    loop, criteria = read_loop(options.loop), read_criteria(options.criteria)
+    with read_bank(options.bank) as bank, _progress() as progress:
+        report = stream_audit(
+            bank,
+            loop,
+            criteria,
+            ledger=options.ledger,
+            csv=options.csv,
+            depth=options.depth,
+            worst=options.worst,
+            workers=options.workers,
+            progress=progress,
+        )
+    if options.json is not None:
+        from ssaudit.report.records import as_json, audit_record
+
+        _write_json(as_json(audit_record(report)), options.json)
+    if options.json != "-":
+        from ssaudit.report.audit_text import audit_text
+
+        _show(audit_text(report))
+    return OK if report.summary.all_ok else NOT_OK
+
+
+def _drift(options: argparse.Namespace) -> int:
+    from ssaudit.drifting import TOLERANCE
+    from ssaudit.stages import compare_runs
+
+    tolerance = TOLERANCE if options.tolerance is None else options.tolerance
+    found = compare_runs(options.ledger, options.before, options.after, tolerance=tolerance)
+    if options.json is not None:
+        from ssaudit.report.records import as_json, drift_record
+
+        record = drift_record(found.before, found.after, found.drift, options.worst)
+        _write_json(as_json(record), options.json)
+    if options.json != "-":
+        from ssaudit.report.drift_text import drift_text
+
+        _show(drift_text(found, options.worst))
+    return NOT_OK if found.drift.got_worse else OK
+
+
+def _trend(options: argparse.Namespace) -> int:
+    from ssaudit.ledger import newest_of_revisions, read_ledger
+    from ssaudit.report.drift_text import trend_text
+
+    runs = newest_of_revisions(read_ledger(options.ledger))
+    if not runs:
+        raise SsauditError("holds no run", where=str(options.ledger), do="ssaudit audit --ledger")
+    _show(trend_text(runs))
+    return OK
+
+
+def _run(options: argparse.Namespace) -> int:
+    from ssaudit.ledger import newest_of_revisions, read_ledger
+    from ssaudit.pipeline import read_pipeline, run_pipeline
+    from ssaudit.report.drift_text import trend_text
+    from ssaudit.report.pipeline_text import all_ok, stage_text
+
+    pipeline = read_pipeline(options.pipeline)
+    code = OK
+    with _progress() as progress:
+        for result in run_pipeline(options.pipeline, worst=options.worst, progress=progress):
+            _show(stage_text(result, options.worst))
+            code = code if all_ok(result) else NOT_OK
+    if len(pipeline.revisions) > 1:
+        _show(trend_text(newest_of_revisions(read_ledger(pipeline.ledger))))
+    return code
+
+
+def _refuse_overwriting(inputs: Sequence[Path], *outputs: str | Path | None) -> None:
+    for output in outputs:
+        if output in (None, "-"):
+            continue
+        for path in inputs:
+            if Path(str(output)).resolve() == path.resolve():
+                raise SsauditError("is an input and an output", where=str(output),
+                                   do="choose another output")  # fmt: skip
+
+
+def _write_json(text: str, target: str) -> None:
+    if target == "-":
+        print(text)
+        return
+    try:
+        Path(target).write_text(text + "\n", encoding="utf-8")
+    except OSError as error:
+        raise SsauditError(f"cannot be written ({error.strerror})", where=target,
+                           do="choose another place") from error  # fmt: skip
+
+
+def _show(renderable: "RenderableType") -> None:
+    from rich.console import Console
+
+    known = sys.stdout.isatty() or "COLUMNS" in os.environ
+    console = Console(width=None if known else WIDTH, highlight=False, markup=False, emoji=False)
+    console.print(renderable)
+    console.print()
+
+
+@contextmanager
+def _progress() -> Iterator["Progress"]:
+    """Show progress on stderr, and none where nobody watches."""
+    from ssaudit.intake.ingest import no_progress
+
+    if not sys.stderr.isatty():
+        yield no_progress
+        return
+    from rich.console import Console
+    from rich.progress import Progress, TaskID
+
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        tasks: dict[str, TaskID] = {}
+
+        def show(stage: str, done: int, total: int) -> None:
+            if stage not in tasks or done == 0:
+                tasks[stage] = bar.add_task(stage, total=total)
+            bar.update(tasks[stage], completed=done, total=total)
+
+        yield show
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,101 @@
+"""Columns of the points and the modes table, as they stand in the ledger."""
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ssaudit.bank import Points, Section
+from ssaudit.criteria import Criteria
+from ssaudit.judging import LOST, VERDICTS, VOID, Judgement, missed_names
+from ssaudit.loop.model import ClosedModels
+from ssaudit.modes.participation import TOP, state_names
+from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_constant
+from ssaudit.modes.stacked import Modes
+
+Columns = dict[str, NDArray[Any]]
+
+
+def point_columns(
+    revision: str,
+    section: Section,
+    points: Points,
+    closed: ClosedModels,
+    modes: Modes,
+    judgement: Judgement,
+    criteria: Criteria,
+) -> Columns:
+    """Columns of the points table, in the ledger's order."""
+    count = len(points)
+    rows = np.arange(count)
+    judged = judgement.worst >= 0
+    s = np.full(count, np.nan + 0j)
+    if modes.s.shape[1]:
+        s[judged] = modes.s[rows, judgement.worst][judged]
+    with np.errstate(invalid="ignore"):
+        ratios = damping_ratio(modes.s)
+    columns: Columns = {
+        "point": points.ids.astype(object),
+        "revision": np.full(count, revision, dtype=object),
+        **{f"at_{name}": column for name, column in points.coordinates.items()},
+        **{f"tag_{name}": column.astype(object) for name, column in points.tags.items()},
+        "verdict": np.array(VERDICTS, dtype=object)[judgement.verdict],
+        "reason": judgement.reason,
+        "missed": missed_names(judgement.missed, judgement.verdict == LOST, criteria),
+        "max_real": _extreme(np.fmax, modes.s.real),
+        "min_damping": _extreme(np.fmin, ratios),
+        "real": s.real,
+        "imag": np.abs(s.imag),
+        "natural_frequency": natural_frequency(s),
+        "damping_ratio": damping_ratio(s),
+        "time_constant": time_constant(s),
+        "shortfall": _deepest(judgement),
+        "held": closed.held,
+    }
+    if modes.index is not None and modes.share is not None:
+        top, share = np.full((count, TOP), -1), np.full((count, TOP), np.nan)
+        if modes.s.shape[1]:
+            top[judged] = modes.index[rows, judgement.worst][judged]
+            share[judged] = modes.share[rows, judgement.worst][judged]
+            columns["radius"] = np.where(judged, modes.radius[rows, judgement.worst], np.nan)
+        else:
+            columns["radius"] = np.full(count, np.nan)
+        columns["top_states"] = state_names(top, section.states)
+        columns |= {f"participation_{i + 1}": share[:, i] for i in range(TOP)}
+    return columns
+
+
+def _extreme(pick: Any, values: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Largest or smallest value of each point; NaN where there is none."""
+    if values.shape[1] == 0:
+        return np.full(len(values), np.nan)
+    return np.asarray(pick.reduce(values, axis=1))
+
+
+def _deepest(judgement: Judgement) -> NDArray[np.float64]:
+    """By what share of its limit each point misses the requirement that it misses by most."""
+    if judgement.shortfall.shape[1] == 0:
+        return np.full(len(judgement.verdict), np.nan)
+    deepest = judgement.shortfall.max(axis=1)
+    known = np.isfinite(deepest) & (judgement.verdict != VOID)
+    return np.asarray(np.where(known, deepest, np.nan))
+
+
+def mode_columns(section: Section, closed: ClosedModels, modes: Modes) -> Columns:
+    """Columns of the modes table, in the ledger's order; conjugate pairs once."""
+    keep = (modes.s.imag >= 0) & (closed.void == "")[:, np.newaxis]
+    row, _ = np.nonzero(keep)
+    s = modes.s[keep]
+    columns: Columns = {
+        "row": row,
+        "real": s.real,
+        "imag": s.imag + 0.0,
+        "natural_frequency": natural_frequency(s),
+        "damping_ratio": damping_ratio(s),
+        "time_constant": time_constant(s),
+        "modulus": np.full(len(s), np.nan) if modes.z is None else np.abs(modes.z[keep]),
+    }
+    if modes.index is not None:
+        columns["radius"] = modes.radius[keep]
+        columns["top_states"] = state_names(modes.index[keep], section.states)
+    return columns

@@ -1,0 +1,296 @@
+"""Judging stacked modes by criteria: one verdict a point, with the reason."""
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ssaudit.bank import Points
+from ssaudit.criteria import STABILITY, Criteria, Requirement
+from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_constant
+from ssaudit.modes.radii import damping_ratio_radius
+from ssaudit.modes.stacked import Modes
+
+Floats = NDArray[np.float64]
+# From the best to the worst for sorting; a void point could not be judged.
+VERDICTS = ("ok", "void", "short", "doubt", "lost")
+OK, VOID, SHORT, DOUBT, LOST = range(5)
+
+
+@dataclass(frozen=True, eq=False)
+class Judgement:
+    """What came of judging some points.
+
+    Attributes
+    ----------
+    verdict : (points,) int
+        Index into `VERDICTS`.
+    reason : (points,) object
+        Why, as str; "" where the point is ok.
+    worst : (points,) int
+        The mode that decides the verdict: of a short point the one that misses its requirement by
+        most, otherwise the one furthest to the right. -1 at void points.
+    missed : (points, requirements) bool
+        Which requirements a judged point surely misses.
+    value : (points, requirements) float
+        The worst value of each requirement's quantity; NaN where it does not apply.
+    shortfall : (points, requirements) float
+        How much of its limit each requirement is missed by; negative where it is met.
+    """
+
+    verdict: NDArray[np.int64]
+    reason: NDArray[np.object_]
+    worst: NDArray[np.int64]
+    missed: NDArray[np.bool_]
+    value: Floats
+    shortfall: Floats
+
+
+def quantity_range(
+    quantity: str, s: NDArray[np.complex128], radius: Floats
+) -> tuple[Floats, Floats, Floats]:
+    """Value of a quantity at poles, and the range it has while they stay within their radii.
+
+    Parameters
+    ----------
+    quantity : str
+        One of `ssaudit.criteria.MODE_QUANTITIES`.
+    s : (...) complex
+        Poles [1/s].
+    radius : (...) float
+        How far each may be off [1/s].
+
+    Returns
+    -------
+    value, low, high : (...) float
+
+    Examples
+    --------
+    >>> quantity_range("real", np.array([-2 + 1j]), np.array([0.5]))
+    (array([-2.]), array([-2.5]), array([-1.5]))
+    """
+    if quantity == "damping_ratio":
+        return (damping_ratio(s), *damping_ratio_radius(s, radius))
+    if quantity == "natural_frequency":
+        size = natural_frequency(s)
+        return size, np.maximum(size - radius, 0.0), size + radius
+    low, high = s.real - radius, s.real + radius
+    if quantity == "real":
+        return s.real, low, high
+    # -1/x rises with x on either side of 0; a pole that may lie on both has any time constant.
+    across = (low < 0) & (high >= 0)
+    return (
+        time_constant(s),
+        np.where(across, -np.inf, time_constant(low.astype(np.complex128))),
+        np.where(across, np.inf, time_constant(high.astype(np.complex128))),
+    )
+
+
+def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Criteria) -> Judgement:
+    """Judge some points by criteria.
+
+    Parameters
+    ----------
+    modes : Modes
+        Their modes.
+    points : Points
+        Their coordinates and tags.
+    void : (points,) object
+        Why a point could not be judged; "" where it can.
+    criteria : Criteria
+        What to judge by.
+
+    Returns
+    -------
+    Judgement
+    """
+    count, size = modes.s.shape[0], len(criteria.requirements)
+    verdict = np.full(count, OK)
+    reason = np.full(count, "", dtype=object)
+    worst = _furthest_right(modes.s)
+    missed = np.zeros((count, size), dtype=bool)
+    value, shortfall = np.full((count, size), np.nan), np.full((count, size), -np.inf)
+    deepest = np.full(count, -np.inf)
+    for column, requirement in enumerate(criteria.requirements):
+        inside = requirement.applies(points)
+        result = _judge_requirement(requirement, modes, inside)
+        missed[:, column] = result.missed
+        value[:, column], shortfall[:, column] = result.value, result.shortfall
+        doubtful = result.doubt & (verdict != SHORT) & (verdict != DOUBT)
+        verdict[doubtful] = DOUBT
+        reason[doubtful] = _doubt_reasons(requirement, result, doubtful)
+        deeper = result.missed & (result.shortfall > deepest)
+        verdict[deeper] = SHORT
+        reason[deeper] = _short_reasons(requirement, result.value[deeper])
+        worst[deeper] = result.mode[deeper]
+        deepest[deeper] = result.shortfall[deeper]
+    _judge_stability(modes, verdict, reason, worst)
+    is_void = void != ""
+    verdict[is_void], reason[is_void], worst[is_void] = VOID, void[is_void], -1
+    missed[is_void] = False
+    return Judgement(verdict, reason, worst, missed, value, shortfall)
+
+
+def _furthest_right(s: NDArray[np.complex128]) -> NDArray[np.int64]:
+    if s.shape[1] == 0:
+        return np.full(len(s), -1)
+    return np.asarray(np.argmax(np.where(np.isnan(s.real), -np.inf, s.real), axis=1))
+
+
+def _judge_stability(
+    modes: Modes,
+    verdict: NDArray[np.int64],
+    reason: NDArray[np.object_],
+    worst: NDArray[np.int64],
+) -> None:
+    """Overrule verdicts where a pole is not surely to the left of the axis."""
+    with np.errstate(invalid="ignore"):
+        surely = modes.s.real - modes.radius >= 0
+        maybe = modes.s.real + modes.radius >= 0
+    lost = surely.any(axis=1)
+    doubt = maybe.any(axis=1) & ~lost
+    furthest = _furthest_right(modes.s)
+    worst[lost | doubt] = furthest[lost | doubt]
+    verdict[lost], verdict[doubt] = LOST, DOUBT
+    reason[lost] = _lost_reasons(surely[lost].sum(axis=1), modes.z is not None)
+    rows = np.flatnonzero(doubt)
+    at = modes.s.real[rows, furthest[rows]]
+    off = modes.radius[rows, furthest[rows]]
+    reason[rows] = _join("stability: real part ", "%.3g", at, " ± ", "%.1g", off, " 1/s reaches 0")
+
+
+def _lost_reasons(counts: NDArray[np.int64], sampled: bool) -> NDArray[np.object_]:
+    place = "outside the unit circle" if sampled else "right of the axis"
+    kinds = np.array(
+        [f"not stable: {k} pole{'s' * (k > 1)} {place}" for k in range(counts.max(initial=0) + 1)],
+        dtype=object,
+    )
+    return np.asarray(kinds[counts])
+
+
+@dataclass(frozen=True, eq=False)
+class _Result:
+    """One requirement at some points: (points,) arrays."""
+
+    missed: NDArray[np.bool_]
+    doubt: NDArray[np.bool_]
+    value: Floats
+    spread: Floats
+    shortfall: Floats
+    mode: NDArray[np.int64]
+
+
+def _judge_requirement(
+    requirement: Requirement, modes: Modes, inside: NDArray[np.bool_]
+) -> _Result:
+    value, low, high = quantity_range(requirement.quantity, modes.s, modes.radius)
+    known = ~np.isnan(modes.s.real) & ~np.isnan(value) & inside[:, np.newaxis]
+    surely, maybe = _within(requirement, modes)
+    shortfall = _shortfall(requirement, value, value)
+    missed = known & surely & (_shortfall(requirement, high, low) > 0)
+    doubt = known & maybe & (_shortfall(requirement, low, high) > 0) & ~missed
+    shortfall = np.where(known & maybe, shortfall, -np.inf)
+    # A mode in doubt outranks those that pass by more; one that surely misses outranks all.
+    order = np.where(missed.any(axis=1, keepdims=True) & ~missed, -np.inf, shortfall)
+    if not order.shape[1]:
+        nothing = np.full(len(inside), np.nan)
+        no = np.zeros(len(inside), dtype=bool)
+        return _Result(no, no, nothing, nothing, nothing, np.full(len(inside), -1))
+    mode = np.argmax(order, axis=1)
+    rows = np.arange(len(inside))
+    applied = (known & maybe).any(axis=1)
+    spread = np.maximum(high - value, value - low)
+    any_missed, any_doubt = np.any(missed, axis=1), np.any(doubt, axis=1)
+    return _Result(
+        np.asarray(any_missed),
+        np.asarray(any_doubt & ~any_missed),
+        np.where(applied, value[rows, mode], np.nan),
+        spread[rows, mode],
+        shortfall[rows, mode],
+        mode,
+    )
+
+
+def _within(requirement: Requirement, modes: Modes) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+    """Modes that surely, and that perhaps, lie in the requirement's range of frequencies."""
+    if requirement.frequency is None:
+        everywhere = np.ones(modes.s.shape, dtype=bool)
+        return everywhere, everywhere
+    bottom, top = requirement.frequency
+    _, low, high = quantity_range("natural_frequency", modes.s, modes.radius)
+    with np.errstate(invalid="ignore"):
+        return (low >= bottom) & (high <= top), (high >= bottom) & (low <= top)
+
+
+def _shortfall(requirement: Requirement, for_least: Floats, for_most: Floats) -> Floats:
+    """How far beyond its limits a value lies, as a share of the limit (of 1, for a limit of 0)."""
+    worst = np.full(for_least.shape, -np.inf)
+    with np.errstate(invalid="ignore"):
+        if requirement.at_least is not None:
+            gap = requirement.at_least - for_least
+            worst = np.maximum(worst, gap / (abs(requirement.at_least) or 1.0))
+        if requirement.at_most is not None:
+            gap = for_most - requirement.at_most
+            worst = np.maximum(worst, gap / (abs(requirement.at_most) or 1.0))
+    return worst
+
+
+def _short_reasons(requirement: Requirement, value: Floats) -> NDArray[np.object_]:
+    """Say by how much a requirement is missed, such as "damping_ratio 0.21, 0.03 below 0.24"."""
+    head = f"{requirement.name}: {requirement.quantity} "
+    unit = f" {requirement.unit}".rstrip()
+    least = -np.inf if requirement.at_least is None else requirement.at_least
+    most = np.inf if requirement.at_most is None else requirement.at_most
+    below = _join(head, "%.3g", value, f"{unit}, ", "%.2g", least - value, f" below {least:g}")
+    above = _join(head, "%.3g", value, f"{unit}, ", "%.2g", value - most, f" above {most:g}")
+    return np.asarray(np.where(value < least, below, above), dtype=object)
+
+
+def _doubt_reasons(
+    requirement: Requirement, result: _Result, rows: NDArray[np.bool_]
+) -> NDArray[np.object_]:
+    head = f"{requirement.name}: {requirement.quantity} "
+    tail = f" {requirement.unit}".rstrip() + f" against {requirement.limits}"
+    return _join(head, "%.4g", result.value[rows], " ± ", "%.1g", result.spread[rows], tail)
+
+
+def _join(*parts: str | Floats) -> NDArray[np.object_]:
+    """Join texts and formatted numbers to one text a point; a format stands before its numbers."""
+    text: Any = ""
+    pattern = ""
+    for part in parts:
+        if isinstance(part, str):
+            if part.startswith("%"):
+                pattern = part
+            else:
+                text = text + part
+        else:
+            text = text + np.char.mod(pattern, part).astype(object)
+    return np.asarray(text, dtype=object)
+
+
+def missed_names(
+    missed: NDArray[np.bool_], lost: NDArray[np.bool_], criteria: Criteria
+) -> NDArray[np.object_]:
+    """Names of what each point misses, joined by "; ".
+
+    Parameters
+    ----------
+    missed : (points, requirements) bool
+        Which requirements are missed.
+    lost : (points,) bool
+        Where stability is.
+    criteria : Criteria
+        Their names.
+
+    Returns
+    -------
+    (points,) object
+    """
+    every = np.column_stack([lost, missed])
+    names = [STABILITY, *(requirement.name for requirement in criteria.requirements)]
+    kinds, inverse = np.unique(every, axis=0, return_inverse=True)
+    texts = np.empty(len(kinds), dtype=object)
+    texts[:] = ["; ".join(n for n, yes in zip(names, kind, strict=True) if yes) for kind in kinds]
+    return np.asarray(texts[inverse.reshape(-1)], dtype=object)

@@ -1,0 +1,113 @@
+"""Which states take part in which mode."""
+
+from collections.abc import Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+TOP = 3
+
+
+def participation(
+    right: NDArray[np.complex128], left: NDArray[np.complex128]
+) -> NDArray[np.float64]:
+    """Participation factors of the states in each mode, normalised to sum 1.
+
+    Parameters
+    ----------
+    right : (points, n, n) complex
+        Right eigenvectors in columns.
+    left : (points, n, n) complex
+        Left eigenvectors in rows, ``left @ right`` the identity.
+
+    Returns
+    -------
+    (points, modes, states) float
+        abs(p) with p = left × right of the same state, each mode's row scaled to sum 1; NaN where
+        the vectors are. They do not depend on the units of the states.
+
+    References
+    ----------
+    Pérez-Arriaga, Verghese & Schweppe, Selective modal analysis with applications to electric
+    power systems, IEEE Trans. PAS-101(9), 1982 (from memory).
+
+    Examples
+    --------
+    >>> right = np.array([[[1.0, 0.0], [1.0, 1.0]]])
+    >>> participation(right, np.linalg.inv(right))
+    array([[[1., 0.],
+            [0., 1.]]])
+    """
+    factors = np.abs(np.swapaxes(right, 1, 2) * left)
+    with np.errstate(invalid="ignore"):
+        return np.asarray(factors / factors.sum(axis=2, keepdims=True))
+
+
+def top_states(
+    factors: NDArray[np.float64], count: int = TOP
+) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Find the states that take part most in each mode.
+
+    Parameters
+    ----------
+    factors : (modes, states) float
+        Participation factors.
+    count : int
+        How many to name.
+
+    Returns
+    -------
+    index : (modes, count) int
+        States in falling order of participation; -1 when there are no more, or where the factors
+        are not known.
+    share : (modes, count) float
+        Their participation; NaN where the index is -1.
+
+    Examples
+    --------
+    >>> index, share = top_states(np.array([[0.3, 0.6, 0.1]]), 2)
+    >>> index, share
+    (array([[1, 0]]), array([[0.6, 0.3]]))
+    """
+    modes, states = factors.shape
+    index = np.full((modes, count), -1, dtype=np.int64)
+    share = np.full((modes, count), np.nan)
+    left = np.where(np.isnan(factors), -1.0, factors)
+    rows = np.arange(modes)
+    for place in range(min(count, states)):
+        best = left.argmax(axis=1)
+        found = left[rows, best] > 0
+        index[found, place] = best[found]
+        share[found, place] = left[rows, best][found]
+        left[rows, best] = -1.0
+    return index, share
+
+
+def state_names(index: NDArray[np.int64], states: Sequence[str]) -> NDArray[np.object_]:
+    """Write the names of the top states of each mode, in order.
+
+    Parameters
+    ----------
+    index : (modes, count) int
+        As from `top_states`.
+    states : sequence of str
+        Names of the states.
+
+    Returns
+    -------
+    (modes,) object
+        Such as "pitch, heave"; "" where none is known.
+
+    Examples
+    --------
+    >>> state_names(np.array([[1, 0], [0, -1]]), ["heave", "pitch"])
+    array(['pitch, heave', 'heave'], dtype=object)
+    """
+    base = len(states) + 1
+    code = np.zeros(len(index), dtype=np.int64)
+    for column in index.T:
+        code = code * base + (column + 1)
+    codes, first, inverse = np.unique(code, return_index=True, return_inverse=True)
+    texts = np.empty(len(codes), dtype=object)
+    texts[:] = [", ".join(states[i] for i in index[row] if i >= 0) for row in first]
+    return np.asarray(texts[inverse], dtype=object)

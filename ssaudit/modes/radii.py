@@ -1,0 +1,367 @@
+"""How far each true pole may lie from the computed one: rounding of the export and of arithmetic.
+
+The chain is: an uncertainty of every entry of the exported matrices (`rounding_error`, or stated by
+the user), carried through closing (`closed_loop_entry_error`), becomes a radius around every
+computed pole (`pole_radii`), and that a range of damping ratios (`damping_ratio_radius`).
+"""
+
+from collections.abc import Mapping
+from typing import Literal
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from ssaudit.modes.clusters import balance_scaling, cluster_radii, gather_components
+from ssaudit.modes.poles import isolate
+
+Floats = NDArray[np.float64]
+Complexes = NDArray[np.complex128]
+
+EPS = float(np.finfo(float).eps)
+"""Spacing of binary floating-point numbers at 1: twice the unit roundoff."""
+
+MAX_INVERSE_DEFECT = 0.5
+"""Largest norm of I - left @ right for which the computed left vectors are still used: the Neumann
+series that corrects them has converged well below 1; beyond, the vectors prove nothing."""
+
+SLICE_ENTRIES = 60_000
+"""Entries of a stack taken at once, so that the temporary arrays stay in the processor's cache."""
+
+
+def rounding_error(M: ArrayLike, digits: int) -> Floats:
+    """Half a unit of the last significant digit of every entry of a matrix; zeros are exact.
+
+    Parameters
+    ----------
+    M : (...) array
+        Entries as they were written, in any unit.
+    digits : int
+        Significant decimal digits that the exporter wrote, at least 1.
+
+    Returns
+    -------
+    (...) float
+        How far the true entry may be from the written one, in the entry's own unit. The conversion
+        of the decimal to binary is included.
+
+    Examples
+    --------
+    >>> rounding_error([0.0, -32.2, 773.98], 5)
+    array([0.    , 0.0005, 0.005 ])
+    """
+    if digits < 1:
+        raise ValueError(f"digits is {digits}, expected at least 1")
+    size = np.abs(np.asarray(M, dtype=float))
+    with np.errstate(divide="ignore"):
+        # The small addition keeps an exact power of ten in its own decade.
+        decade = np.floor(np.log10(size) + 1e-12)
+    half_unit = 0.5 * 10.0 ** np.where(size > 0, decade - (digits - 1), 0.0)
+    return np.where(size > 0, half_unit + 0.5 * EPS * size, 0.0)
+
+
+def closed_loop_entry_error(
+    A: Floats,
+    B: Floats,
+    C: Floats | None,
+    D: Floats | None,
+    K: Floats,
+    *,
+    sign: int,
+    feed: Literal["states", "outputs"] = "outputs",
+    digits: int | None = None,
+    errors: Mapping[str, ArrayLike] | None = None,
+) -> Floats:
+    """Uncertainty of every entry of A + σB(I - σKD)⁻¹KC from the matrices that it is made of.
+
+    Not only to first order: with L = (I - σKD)⁻¹K, entrywise uncertainties dA, dB, ... and
+    X = |L| dD + |(I - σKD)⁻¹| dK (|D| + dD), the changed L is within
+    dL = (I - X)⁻¹(X |L| + |(I - σKD)⁻¹| dK) while the spectral radius of X is below 1, and the
+    entries are within dA + dB(|L| + dL)(|C| + dC) + |B| dL (|C| + dC) + |B||L| dC. The rounding of
+    the closing arithmetic itself is always included.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        State matrices [1/s when continuous]; the other matrices in the units that belong to them.
+    B : (points, n, inputs) float
+        Input matrices.
+    C : (points, outputs, n) float or None
+        Output matrices; not used when the states are fed back.
+    D : (points, outputs, inputs) float or None
+        Direct feed-through; None: zero. Not used when the states are fed back.
+    K : (inputs, signals) or (points, inputs, signals) float
+        Gains as used at each point.
+    sign : int
+        σ: -1 for u = -K y, +1 for u = +K y.
+    feed : {"states", "outputs"}
+        What y is: the states themselves or the outputs C x + D u.
+    digits : int, optional
+        Significant digits to which A, B, C and D were written; None: exact.
+    errors : mapping of "A", "B", "C", "D", "K" to arrays, optional
+        Absolute uncertainty of every entry, broadcast to the matrix; added to that from `digits`.
+
+    Returns
+    -------
+    (points, n, n) float
+        Absolute uncertainty of every entry of the closed matrix; inf at points where the loop
+        might be ill-posed within the uncertainty.
+
+    References
+    ----------
+    Higham, Accuracy and Stability of Numerical Algorithms, 2nd ed. (2002), §3.1 (rounding of sums
+    of products), §7.1 (perturbed linear systems, entrywise). From memory.
+
+    Examples
+    --------
+    >>> A, B, C = np.array([[[-1.0]]]), np.array([[[2.0]]]), np.array([[[1.0]]])
+    >>> closed_loop_entry_error(A, B, C, None, np.eye(1), sign=-1, digits=3).round(4)
+    array([[[0.02]]])
+    """
+    states, inputs, signals = A.shape[-1], B.shape[-1], K.shape[-1]
+    output, through = C, D
+    if feed == "states" or output is None:
+        output, through = np.eye(states), None
+
+    def error(name: str, M: Floats, exact: bool = False) -> Floats:
+        stated = np.broadcast_to(np.asarray((errors or {}).get(name, 0.0), dtype=float), M.shape)
+        return stated if digits is None or exact else stated + rounding_error(M, digits)
+
+    dA, dB, dK = error("A", A), error("B", B), error("K", K, exact=True)
+    fixed = feed == "states" or C is None
+    dC = np.zeros_like(output) if fixed else error("C", output)
+    L, dL = np.abs(K), np.asarray(dK)
+    if through is not None and (np.any(through) or "D" in (errors or {})):
+        L, dL = _feed_through_error(K, dK, through, error("D", through), sign)
+    wide, path = np.abs(output) + dC, np.abs(B) @ L @ np.abs(output)
+    spread = dA + dB @ (L + dL) @ wide + np.abs(B) @ dL @ wide + np.abs(B) @ L @ dC
+    total = spread + EPS * ((inputs + signals + 3) * path + np.abs(A))
+    return np.where(np.isnan(total), np.inf, total)
+
+
+def _feed_through_error(
+    K: Floats, dK: Floats, D: Floats, dD: Floats, sign: int
+) -> tuple[Floats, Floats]:
+    """Size of L = (I - σKD)⁻¹K and its uncertainty, both (points, inputs, signals)."""
+    inputs, outputs = K.shape[-2], K.shape[-1]
+    loop = np.eye(inputs) - sign * (K @ D)
+    (inverse,), _ = isolate(lambda stack: (np.linalg.inv(stack),), loop.reshape(-1, inputs, inputs))
+    inverse = inverse.reshape(loop.shape)
+    L, size = np.abs(inverse @ K), np.abs(inverse)
+    # Rounding of I - KD and of the solve, as an entrywise change of I - KD. The factor for
+    # elimination is generous: growth of a few inputs' pivots is far below it.
+    rounding = size @ (4 * (inputs + outputs) * EPS * (np.eye(inputs) + np.abs(K) @ np.abs(D)))
+    X = L @ dD + size @ dK @ (np.abs(D) + dD) + rounding
+    ill_posed = ~(X.sum(axis=-1).max(axis=-1) < 1.0)
+    X = np.where(ill_posed[..., None, None], 0.0, X)
+    gains = dK + (outputs + 2) * EPS * np.abs(K)
+    dL = np.linalg.solve(np.eye(inputs) - X, X @ L + size @ gains)
+    return L, np.where(ill_posed[..., None, None], np.nan, dL)
+
+
+def pole_radii(
+    A: Floats,
+    poles: Complexes,
+    right: Complexes,
+    left: Complexes,
+    *,
+    entry_error: ArrayLike | None = None,
+    distance: Floats | None = None,
+) -> Floats:
+    """How far each true pole may lie from the computed one.
+
+    With the computed right vectors V, left vectors W and poles Λ, every matrix A + δA with
+    |δA| <= entry_error is similar to Λ + V⁻¹(AV - VΛ + δA V). The residual is computed, its own
+    rounding is added, and W's defect I - WV is allowed for; so Gershgorin's disks of that matrix,
+    of radii Σ_j F_ij with F = |W|(|AV - VΛ| + rounding + entry_error |V|), hold the true poles
+    without any assumption on the eigenvalue solver. A disk that can be scaled free of the others
+    holds exactly one pole and shrinks to the first-order bound |w_i| E |v_i| and a second-order
+    rest. Overlapping disks form a group; a true pole of the group may be anywhere in their union.
+    Where this is too wide to decide, or there are no left vectors, invariant subspaces of clusters
+    are used (`ssaudit.modes.clusters`). All is unchanged by scaling the states, whatever the units.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        Closed-loop state matrices [1/s when continuous], all entries finite.
+    poles, right, left : complex arrays
+        From `ssaudit.modes.poles.find_modes`.
+    entry_error : array that broadcasts to (points, n, n), optional
+        Absolute uncertainty of every entry of A (`closed_loop_entry_error`); None: A is exact.
+    distance : (points, n) float, optional
+        How far the boundaries to be judged by are from each pole [1/s]. Overlapping groups whose
+        radii reach that far get the dearer second bound. By default the distance from the
+        imaginary axis; for sampled models give the distance from the unit circle.
+
+    Returns
+    -------
+    (points, n) float
+        Radii [1/s; without unit when sampled]: the true poles can be matched one to one to the
+        computed ones so that each is within its radius. inf where nothing is known.
+
+    References
+    ----------
+    Wilkinson, The Algebraic Eigenvalue Problem (1965), ch. 2 (Gershgorin's theorem with diagonal
+    scaling) and ch. 9 (a posteriori bounds for computed eigensystems). Stewart & Sun, Matrix
+    Perturbation Theory (1990), ch. IV. Rounding of the residual: Higham, Accuracy and Stability of
+    Numerical Algorithms, 2nd ed. (2002), eq. 3.13. From memory.
+
+    Examples
+    --------
+    >>> from ssaudit.modes.poles import find_modes
+    >>> A = np.array([[[-1.0, 1.0], [0.0, -2.0]]])
+    >>> poles, right, left, _ = find_modes(A)
+    >>> bool(pole_radii(A, poles, right, left).max() < 1e-14)
+    True
+    >>> pole_radii(A, poles, right, left, entry_error=0.001).round(4)
+    array([[0.002, 0.002]])
+    """
+    points, states = poles.shape
+    radii = np.full((points, states), np.inf)
+    if radii.size == 0:
+        return radii
+    error = None if entry_error is None else np.asarray(entry_error, dtype=float)
+    if error is not None:
+        error = np.broadcast_to(error, A.shape)
+    if distance is None:
+        distance = np.abs(poles.real)
+    step = max(1, SLICE_ENTRIES // states**2)
+    for start in range(0, points, step):
+        part = slice(start, start + step)
+        E = None if error is None else error[part]
+        with np.errstate(all="ignore"):
+            radii[part] = _slice_radii(
+                A[part], poles[part], right[part], left[part], E, distance[part]
+            )
+    return radii
+
+
+def _slice_radii(
+    A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None, distance: Floats
+) -> Floats:
+    """Radii (points, n) of a stack small enough for the cache."""
+    F = _coupling(A, poles, V, W, E)
+    gap = np.abs(poles[:, :, None] - poles[:, None, :])
+    np.einsum("pii->pi", gap)[:] = np.inf
+    radii, isolated = _isolated_radii(F, gap)
+    loose = np.flatnonzero(~isolated.all(axis=1))
+    if loose.size:
+        plain = F[loose].sum(axis=-1)
+        grouped = gather_components(poles[loose], poles[loose], plain, gap[loose])
+        radii[loose] = np.where(isolated[loose], radii[loose], grouped)
+    radii[np.isnan(radii)] = np.inf
+    reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
+    scales = balance_scaling(A[reaching])
+    for i, scale in zip(np.flatnonzero(reaching), scales, strict=True):
+        tighter = cluster_radii(A[i], poles[i], None if E is None else E[i], scale)
+        # One method for a whole point: a matching may not mix two. The geometric mean of the radii
+        # compares them without regard to units.
+        if np.log(tighter + 1e-300).sum() < np.log(radii[i] + 1e-300).sum():
+            radii[i] = tighter
+    return radii
+
+
+def _coupling(A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None) -> Floats:
+    """Bound F on the entries of V⁻¹(A + δA)V - Λ; inf where the left vectors are of no use."""
+    points, n = poles.shape
+    gamma = (n + 4) * EPS
+    size = np.abs(V)
+    # A is real: a real product of twice the columns costs half of a complex one.
+    residual = (A @ V.view(float).reshape(points, n, 2 * n)).view(complex)
+    residual -= V * poles[:, None, :]
+    known = gamma * np.abs(A)
+    if E is not None:
+        known += E
+    outer = np.abs(residual)
+    outer += known @ size
+    outer += (gamma * np.abs(poles))[:, None, :] * size
+    left_size = np.abs(W)
+    F = left_size @ outer
+    product = W @ V
+    np.einsum("pii->pi", product)[:] -= 1.0
+    defect = np.abs(product).sum(axis=-1)
+    defect += gamma * (left_size @ size.sum(axis=-1)[..., None])[..., 0]
+    worst = defect.max(axis=-1)
+    factor = np.where(worst <= MAX_INVERSE_DEFECT, 1.0 / (1.0 - worst), np.inf)
+    F += (defect * factor[:, None])[:, :, None] * F.max(axis=1)[:, None, :]
+    # The bound's own sums are rounded too; all terms are positive, so a relative margin does.
+    bound: Floats = F * (1.0 + 8 * gamma)
+    return bound
+
+
+def _isolated_radii(F: Floats, gap: Floats) -> tuple[Floats, NDArray[np.bool_]]:
+    """Gershgorin radii after scaling row i by the smallest factor that frees disk i of the others.
+
+    Scaling row i by a and column i by 1/a leaves the poles. With a = max_j 2 F_ji / gap_ij, F_ji/a
+    takes at most half of each gap; the disk is free if the rest fits into the other half.
+    """
+    n = F.shape[-1]
+    diagonal = np.einsum("pii->pi", F)
+    rows = F.sum(axis=-1)
+    scale = (2.0 * F / gap).max(axis=1)
+    radii = diagonal + np.minimum(scale, 1.0) * (rows - diagonal)
+    radii *= 1.0 + 8 * n * EPS
+    room = (0.5 * gap - rows[:, None, :]).min(axis=-1)
+    return radii, radii < room
+
+
+def damping_ratio_radius(s: Complexes, radius: ArrayLike) -> tuple[Floats, Floats]:
+    """Lowest and highest damping ratio of a pole that lies anywhere in a disk.
+
+    ζ = -cos(arg s), and a disk of radius r around s covers arg s ± asin(r / abs(s)).
+
+    Parameters
+    ----------
+    s : (...) complex
+        Centres: computed poles [1/s].
+    radius : (...) float
+        Radii of the disks [1/s].
+
+    Returns
+    -------
+    low, high : (...) float
+        Ends of the range of damping ratios; -1 and 1 when the disk reaches the origin.
+
+    Examples
+    --------
+    >>> low, high = damping_ratio_radius(np.array([-3 + 4j]), 0.05)
+    >>> low.round(4), high.round(4)
+    (array([0.592]), array([0.608]))
+    """
+    size, radius = np.abs(s), np.asarray(radius, dtype=float)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        ratio = radius / size
+    inside = ratio < 1.0
+    half = np.arcsin(np.where(inside, ratio, 0.0))
+    angle = np.abs(np.angle(s))
+    low = -np.cos(np.maximum(angle - half, 0.0))
+    high = -np.cos(np.minimum(angle + half, np.pi))
+    return np.where(inside, low, -1.0), np.where(inside, high, 1.0)
+
+
+def continuous_radius(z: Complexes, radius: ArrayLike, dt: float) -> Floats:
+    """Radius around log(z)/dt that covers the image of a disk around a sampled pole z.
+
+    abs(log(z + d) - log(z)) <= -log(1 - abs(d)/abs(z)), from the power series of the logarithm.
+
+    Parameters
+    ----------
+    z : (...) complex
+        Computed poles of sampled models.
+    radius : (...) float
+        Radii around them.
+    dt : float
+        Sampling time [s], positive.
+
+    Returns
+    -------
+    (...) float
+        Radii around the equivalent continuous poles [1/s]; inf when the disk reaches z = 0.
+
+    Examples
+    --------
+    >>> continuous_radius(np.array([0.5 + 0j]), 0.001, 0.1).round(5)
+    array([0.02002])
+    """
+    with np.errstate(divide="ignore", invalid="ignore"):
+        ratio = np.asarray(radius, dtype=float) / np.abs(z)
+        return np.where(ratio < 1.0, -np.log1p(-np.minimum(ratio, 1.0)) / dt, np.inf)

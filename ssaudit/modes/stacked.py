@@ -1,0 +1,123 @@
+"""Modes of a chunk: poles, and where asked their vectors, participation and radii."""
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ssaudit.modes.neutral import neutral_states
+from ssaudit.modes.participation import TOP, participation, top_states
+from ssaudit.modes.poles import find_modes, find_poles
+from ssaudit.modes.quantities import continuous_poles
+from ssaudit.modes.radii import continuous_radius, pole_radii
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False)
+class Modes:
+    """Modes of some points, stacked.
+
+    Attributes
+    ----------
+    s : (points, n) complex
+        Poles [1/s]; of sampled models log(z)/dt. NaN at void points and for neutral states.
+    radius : (points, n) float
+        How far each pole may be off [1/s].
+    z : (points, n) complex or None
+        Poles of sampled models themselves.
+    index : (points, n, top) int or None
+        States that take part most in each mode; None where vectors were not computed.
+    share : (points, n, top) float or None
+        Their participation.
+    """
+
+    s: NDArray[np.complex128]
+    radius: Floats
+    z: NDArray[np.complex128] | None = None
+    index: NDArray[np.int64] | None = None
+    share: Floats | None = None
+
+
+def find_usable_modes(
+    A: Floats,
+    usable: NDArray[np.bool_],
+    entry_error: Floats | None,
+    *,
+    dt: float = 0.0,
+    neutral: Sequence[int] = (),
+    vectors: bool = True,
+) -> tuple[Modes, NDArray[np.bool_]]:
+    """Find the modes of the usable points of a stack.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        Closed-loop state matrices.
+    usable : (points,) bool
+        Points to look at; the others get NaN.
+    entry_error : (points, n, n) float or None
+        How far each entry of A may be off; None: A is exact.
+    dt : float
+        Sampling time [s]; 0 for continuous models.
+    neutral : sequence of int
+        States whose poles are left out where nothing depends on them.
+    vectors : bool
+        Whether to compute vectors, participation, and radii from them. Otherwise the radius is
+        only what even a perfectly conditioned pole would have.
+
+    Returns
+    -------
+    modes : Modes
+    failed : (points,) bool
+        Where the eigenvalue iteration did not converge.
+
+    Examples
+    --------
+    >>> modes, failed = find_usable_modes(np.array([[[0.0, 1.0], [-4.0, 0.0]]]), np.array([True]),
+    ...                                   None)
+    >>> modes.s, modes.index[0, 0]
+    (array([[0.+2.j, 0.-2.j]]), array([ 0,  1, -1]))
+    """
+    count, n = A.shape[:2]
+    poles = np.full((count, n), np.nan, dtype=np.complex128)
+    radius = np.full((count, n), np.nan)
+    index = np.full((count, n, TOP), -1, dtype=np.int64) if vectors else None
+    share = np.full((count, n, TOP), np.nan) if vectors else None
+    failed = np.zeros(count, dtype=bool)
+    left_out = neutral_states(A, np.array(neutral, dtype=np.int64), dt > 0)
+    for rows, kept in _alike(left_out, usable):
+        k, whole = len(kept), len(rows) == count and len(kept) == n
+        part = A if whole else A[rows][:, kept][:, :, kept]
+        if index is None or share is None:
+            poles[rows, :k], failed[rows] = find_poles(part)
+            largest = np.abs(part).max(axis=(1, 2), initial=0.0)
+            radius[rows, :k] = np.finfo(float).eps * largest[:, np.newaxis]
+            continue
+        found, right, left, failed[rows] = find_modes(part)
+        poles[rows, :k] = found
+        error = None if entry_error is None else entry_error[rows][:, kept][:, :, kept]
+        distance = np.abs(1 - np.abs(found)) if dt > 0 else None
+        radius[rows, :k] = pole_radii(
+            part, found, right, left, entry_error=error, distance=distance
+        )
+        top, shares = top_states(participation(right, left).reshape(-1, k))
+        index[rows, :k] = np.where(top >= 0, kept[top], -1).reshape(-1, k, TOP)
+        share[rows, :k] = shares.reshape(-1, k, TOP)
+    if dt > 0:
+        s, off = continuous_poles(poles, dt), continuous_radius(poles, radius, dt)
+        return Modes(s, off, poles, index, share), failed
+    return Modes(poles, radius, None, index, share), failed
+
+
+def _alike(
+    left_out: NDArray[np.bool_], usable: NDArray[np.bool_]
+) -> Iterator[tuple[NDArray[np.int64], NDArray[np.int64]]]:
+    """Usable points with the same neutral states: their rows, and the states that stay."""
+    kinds, kind_of = np.unique(left_out, axis=0, return_inverse=True)
+    for number, kind in enumerate(kinds):
+        rows = np.flatnonzero((kind_of.reshape(-1) == number) & usable)
+        kept = np.flatnonzero(~kind)
+        if len(rows) and len(kept):
+            yield rows, kept

@@ -1,0 +1,181 @@
+"""A pipeline file: sources, loop, criteria and ledger of several revisions, stage by stage."""
+
+import os
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from ssaudit.auditing import DEPTHS, Progress
+from ssaudit.bank_file import read_bank
+from ssaudit.criteria import read_criteria
+from ssaudit.errors import PipelineError
+from ssaudit.intake.ingest import Intake, ingest, no_progress
+from ssaudit.loop.files import read_loop
+from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
+from ssaudit.stages import AuditReport, Comparison, compare_runs, stream_audit
+
+# Keys that may stand once for all revisions, or in one of them.
+SHARED = ("loop", "criteria", "layout", "depth")
+
+
+@dataclass(frozen=True)
+class Revision:
+    """One revision of a pipeline.
+
+    Attributes
+    ----------
+    revision : str
+        Its name.
+    sources : tuple of Path
+        Files, folders or glob patterns.
+    bank : Path
+        Bank to write.
+    loop, criteria : Path
+        Loop and criteria files.
+    layout : Path or None
+        Layout file.
+    depth : str
+        Depth of the audit.
+    compare : str or None
+        Revision (or run) to compare with.
+    """
+
+    revision: str
+    sources: tuple[Path, ...]
+    bank: Path
+    loop: Path
+    criteria: Path
+    layout: Path | None
+    depth: str
+    compare: str | None
+
+
+@dataclass(frozen=True)
+class Pipeline:
+    """What a pipeline file says.
+
+    Attributes
+    ----------
+    ledger : Path
+        The ledger's folder.
+    revisions : tuple of Revision
+        In order.
+    """
+
+    ledger: Path
+    revisions: tuple[Revision, ...]
+
+
+def read_pipeline(path: str | os.PathLike[str]) -> Pipeline:
+    """Read a pipeline file.
+
+    Parameters
+    ----------
+    path : path
+        A TOML file; paths in it are relative to it.
+
+    Returns
+    -------
+    Pipeline
+
+    Raises
+    ------
+    PipelineError
+        Naming the file, the key and the way out.
+    """
+    where, folder = str(path), Path(path).parent
+    about = read_toml(path, PipelineError)
+    valid = ("ledger", "banks", "revision", *SHARED)
+    check_keys(about, valid, where=where, error=PipelineError)
+    tables = take(about, "revision", list, where=where, error=PipelineError, default=[])
+    if not tables:
+        raise PipelineError("no revision is given", where=where, do="add a [[revision]] table")
+    ledger = folder / _text(about, "ledger", where)
+    banks = folder / _text(about, "banks", where)
+    shared = {key: about[key] for key in SHARED if key in about}
+    revisions = []
+    for number, table in enumerate(tables, start=1):
+        place = f"{where}, [[revision]] {number}"
+        if not isinstance(table, dict):
+            raise PipelineError("is not a table", where=place)
+        revisions.append(_read_revision(shared | table, folder, banks, place))
+    return Pipeline(ledger, tuple(revisions))
+
+
+def _read_revision(table: dict[str, Any], folder: Path, banks: Path, where: str) -> Revision:
+    valid = ("name", "sources", "compare", *SHARED)
+    check_keys(table, valid, where=where, error=PipelineError)
+    name = _text(table, "name", where)
+    sources = take_words(table, "sources", where=where, error=PipelineError)
+    if not sources:
+        raise PipelineError("sources is missing", where=where, do="name the export's files")
+    depth = take(table, "depth", str, where=where, error=PipelineError, default="modes")
+    if depth not in DEPTHS:
+        raise PipelineError(f"depth is {depth!r}", where=where, do=nearest(depth, DEPTHS))
+    if "/" in name or "\\" in name or name in ("", ".", ".."):
+        raise PipelineError(f"a revision cannot be named {name!r}", where=where)
+    layout = take(table, "layout", str, where=where, error=PipelineError)
+    return Revision(
+        name,
+        tuple(folder / source for source in sources),
+        banks / f"{name}.h5",
+        folder / _text(table, "loop", where),
+        folder / _text(table, "criteria", where),
+        folder / layout if layout else None,
+        depth,
+        take(table, "compare", str, where=where, error=PipelineError),
+    )
+
+
+def _text(table: dict[str, Any], key: str, where: str) -> str:
+    return str(take(table, key, str, where=where, error=PipelineError, required=True))
+
+
+def run_pipeline(
+    path: str | os.PathLike[str], *, worst: int = 10, progress: Progress | None = None
+) -> Iterator[Intake | AuditReport | Comparison]:
+    """Run a pipeline stage by stage.
+
+    Parameters
+    ----------
+    path : path
+        The pipeline file.
+    worst : int
+        How many of the worst points each audit lists.
+    progress : callable, optional
+        Called as ``progress(stage, done, total)``.
+
+    Yields
+    ------
+    Intake, AuditReport or Comparison
+        What each stage came to, as the single commands would have.
+
+    Raises
+    ------
+    SsauditError
+        At the stage that cannot be run.
+    """
+    pipeline = read_pipeline(path)
+    # Loops and criteria are read first: a slip in the last of them should not cost hours.
+    stated = [(read_loop(r.loop), read_criteria(r.criteria)) for r in pipeline.revisions]
+    for revision, (loop, criteria) in zip(pipeline.revisions, stated, strict=True):
+        yield ingest(
+            revision.sources,
+            revision=revision.revision,
+            bank=revision.bank,
+            layout=revision.layout,
+            progress=progress or no_progress,
+        )
+        with read_bank(revision.bank) as bank:
+            yield stream_audit(
+                bank,
+                loop,
+                criteria,
+                ledger=pipeline.ledger,
+                depth=revision.depth,
+                worst=worst,
+                progress=progress,
+            )
+        if revision.compare is not None:
+            yield compare_runs(pipeline.ledger, revision.compare, revision.revision)

@@ -1,0 +1,173 @@
+"""The audit on a screen: is anything lost, where, how badly, why; then what it was made of."""
+
+from collections.abc import Mapping
+from typing import Any
+
+from rich.console import Group, RenderableType
+from rich.text import Text
+
+from ssaudit.report.words import (
+    STYLES,
+    aligned,
+    cautions,
+    counts,
+    number,
+    one_line,
+    pole,
+    printable,
+    verdict,
+)
+from ssaudit.stages import AuditReport
+from ssaudit.summary import Summary
+
+# Coordinates that have a column of their own; more would not fit 80 columns.
+MOST_COORDINATES = 3
+MOST_REQUIREMENTS = 5
+MOST_REASONS = 2
+LONGEST_ID = 24
+
+
+def audit_text(report: AuditReport) -> RenderableType:
+    """Lay out an audit for the terminal.
+
+    Parameters
+    ----------
+    report : AuditReport
+        What was found.
+
+    Returns
+    -------
+    rich renderable
+        With five worst points at most 40 lines at 100 columns.
+    """
+    summary, units = report.summary, report.about["units"]
+    title = f"Audit of revision {summary.revision}: {summary.total} points"
+    parts: list[RenderableType] = [one_line(title, "bold"), counts(summary.counts), Text()]
+    if summary.worst:
+        parts += [*_worst(summary, units), Text()]
+    parts += [*_missed(summary, units), *_void(summary), Text()]
+    parts += [*_provenance(report), Text(), cautions()]
+    return Group(*parts)
+
+
+def _worst(summary: Summary, units: Mapping[str, str]) -> list[Text]:
+    """Two lines a point: the numbers; then what is wrong and which states take part most."""
+    names = [n[3:] for n in summary.worst[0] if n.startswith("at_")][:MOST_COORDINATES]
+    headings = [f"{name} {units.get(name, '')}".rstrip() for name in names]
+    headings = ["worst points", "", *headings, "worst pole 1/s", "ζ"]
+    rows: list[list[str | Text]] = [
+        [
+            shortened(point["point"]),
+            verdict(point["verdict"]),
+            *(f"{point['at_' + name]:g}" for name in names),
+            pole(point["real"], point["imag"]),
+            number(point["damping_ratio"], 3),
+        ]
+        for point in summary.worst
+    ]
+    lines = aligned(headings, "ll" + "r" * (len(names) + 2), rows)
+    details = [one_line(f"    {_why(point)}") for point in summary.worst]
+    return [lines[0], *(line for pair in zip(lines[1:], details, strict=True) for line in pair)]
+
+
+def shortened(point: str) -> str:
+    """Name of a point, cut to what a table has room for."""
+    return point if len(point) <= LONGEST_ID else f"{point[: LONGEST_ID - 1]}…"
+
+
+def _why(point: Mapping[str, Any]) -> str:
+    states = ", ".join(f"{name} {share:.0%}" for name, share in participating(point).items())
+    return f"{point['reason']}; mostly {states}" if states else str(point["reason"])
+
+
+def participating(point: Mapping[str, Any]) -> dict[str, float]:
+    """States that take part most in a point's worst mode, with their participation.
+
+    Parameters
+    ----------
+    point : dict
+        A row of the points table.
+
+    Returns
+    -------
+    dict of float
+        Empty at a depth at which participation is not computed.
+    """
+    names = [name for name in str(point.get("top_states", "")).split(", ") if name]
+    return {name: float(point[f"participation_{i}"]) for i, name in enumerate(names, 1)}
+
+
+def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
+    """A line a requirement, and another that says where, if it is missed anywhere."""
+    shown = summary.missed[:MOST_REQUIREMENTS]
+    rows: list[list[str | Text]] = [
+        [
+            Text(str(missed.points), style="" if missed.points else "dim"),
+            number(missed.worst_value, 3) if missed.points else "",
+            f"{missed.name}: {missed.limits}",
+        ]
+        for missed in shown
+    ]
+    lines = aligned(["missed at", "worst", "requirement"], "rrl", rows)
+    table = [lines[0]]
+    for missed, line in zip(shown, lines[1:], strict=True):
+        table.append(line)
+        if missed.points:
+            table.append(one_line(f"    {_within(missed.between, summary.between, units)}", "dim"))
+    more = len(summary.missed) - MOST_REQUIREMENTS
+    return [*table, one_line(f"and {more} more requirements: --json")] if more > 0 else table
+
+
+def _within(
+    between: Mapping[str, tuple[float, float]],
+    all_points: Mapping[str, tuple[float, float]],
+    units: Mapping[str, str],
+) -> str:
+    """Ranges of coordinates in words; those that all points span tell nothing and are left out."""
+    parts = []
+    for name, (low, high) in between.items():
+        if (low, high) != all_points[name]:
+            span = f"{low:g}" if low == high else f"{low:g} to {high:g}"
+            parts.append(f"{name} {span} {units.get(name, '')}".rstrip())
+    return f"within {', '.join(parts)}" if parts else "all over the envelope"
+
+
+def _void(summary: Summary) -> list[Text]:
+    reasons = list(summary.void.items())
+    lines = [
+        Text.assemble(("void", STYLES["void"]), f" at {count}: {printable(reason)}")
+        for reason, count in reasons[:MOST_REASONS]
+    ]
+    rest = sum(count for _, count in reasons[MOST_REASONS:])
+    if rest:
+        lines.append(one_line(f"void at {rest}, for other reasons: see the ledger or --csv"))
+    for line in lines:
+        line.no_wrap, line.overflow = True, "ellipsis"
+    return [Text(), *lines] if lines else []
+
+
+def _provenance(report: AuditReport) -> list[Text]:
+    about, held = report.about, report.summary.held
+    sources = len(about["sources"])
+    depth = about["settings"]["depth"]
+    rows = [
+        [
+            "bank",
+            f"{report.bank}, content {about['digests']['bank'][:12]}, "
+            f"{sources} source file{'s' * (sources != 1)}",
+        ],
+        [
+            "loop",
+            f"{report.loop}, {report.formula}"
+            + (f", edge gains held at {held} points beyond the table" if held else ""),
+        ],
+        [
+            "criteria",
+            f"{report.criteria}, depth {depth}"
+            + (" (conditioning was not examined)" if depth == "poles" else ""),
+        ],
+    ]
+    if report.run is not None:
+        known = " (logged before; the ledger is unchanged)" if report.already_logged else ""
+        rows.append(["run", f"{report.run.run}{known}"])
+    return aligned(["", ""], "ll", rows)[1:]

@@ -1,0 +1,139 @@
+"""Findings as records for JSON, under the names that the ledger uses."""
+
+import json
+from collections.abc import Mapping
+from typing import Any
+
+from ssaudit.drifting import Drift
+from ssaudit.ledger import LoggedRun, finite
+from ssaudit.report.audit_text import participating
+from ssaudit.report.words import CAUTIONS
+from ssaudit.stages import AuditReport
+
+SCHEMA = 1
+NUMBERS = (
+    "real",
+    "imag",
+    "natural_frequency",
+    "damping_ratio",
+    "time_constant",
+    "max_real",
+    "min_damping",
+    "radius",
+)
+
+
+def as_json(record: Mapping[str, Any]) -> str:
+    """Write a record as JSON; there is no NaN and no infinity in it."""
+    return json.dumps(record, indent=1, allow_nan=False, ensure_ascii=False)
+
+
+def audit_record(report: AuditReport) -> dict[str, Any]:
+    """Record an audit for ``--json``.
+
+    Parameters
+    ----------
+    report : AuditReport
+        What was found.
+
+    Returns
+    -------
+    dict
+        Schema 1 of ``audit --json``.
+    """
+    summary = report.summary
+    return {
+        "schema": SCHEMA,
+        "run": report.run.run if report.run else None,
+        "already_logged": report.already_logged,
+        "revision": summary.revision,
+        "points": {"total": summary.total, **summary.counts},
+        "worst": [_point(point) for point in summary.worst],
+        "requirements": [
+            {
+                "name": missed.name,
+                "required": missed.limits,
+                "missed": missed.points,
+                "worst_point": missed.worst_point or None,
+                "worst_value": finite(missed.worst_value),
+                "at": missed.at,
+                "between": missed.between,
+            }
+            for missed in summary.missed
+        ],
+        "void": summary.void,
+        "held": summary.held,
+        "max_real": finite(summary.max_real),
+        "min_damping": finite(summary.min_damping),
+        "units": report.about["units"],
+        "digests": report.about["digests"],
+        "versions": report.about["versions"],
+        "settings": report.about["settings"],
+        "loop": report.formula,
+        "cautions": CAUTIONS,
+    }
+
+
+def _point(point: Mapping[str, Any]) -> dict[str, Any]:
+    return {
+        "point": point["point"],
+        "at": {n.removeprefix("at_"): finite(v) for n, v in point.items() if n[:3] == "at_"},
+        "tags": {n.removeprefix("tag_"): v for n, v in point.items() if n[:4] == "tag_"},
+        "verdict": point["verdict"],
+        "reason": point["reason"],
+        "missed": [name for name in point["missed"].split("; ") if name],
+        **{name: finite(point[name]) for name in NUMBERS if name in point},
+        "top_states": participating(point),
+    }
+
+
+def drift_record(before: LoggedRun, after: LoggedRun, drift: Drift, movers: int) -> dict[str, Any]:
+    """Record a drift for ``--json``.
+
+    Parameters
+    ----------
+    before, after : LoggedRun
+        The runs compared.
+    drift : Drift
+        What changed.
+    movers : int
+        How many of the largest movers to list.
+
+    Returns
+    -------
+    dict
+    """
+    points = drift.points
+    return {
+        "schema": SCHEMA,
+        "from": {"run": before.run, "revision": before.revision},
+        "to": {"run": after.run, "revision": after.revision},
+        "matched_by": drift.matched_by,
+        "tolerance": drift.tolerance,
+        "points": dict(drift.changes),
+        "relocated": drift.relocated,
+        "verdicts": [
+            {"from": old, "to": new, "points": count}
+            for (old, new), count in drift.verdicts.items()
+        ],
+        "moved": {
+            name: {key: finite(value) for key, value in moved.items()}
+            for name, moved in drift.moved.items()
+        },
+        "changed": _rows(points[points["change"] != "same"]),
+        "movers": _rows(drift.movers(movers)),
+        "cautions": CAUTIONS,
+    }
+
+
+def _rows(frame: Any) -> list[dict[str, Any]]:
+    rows = []
+    for row in frame.to_dict("records"):
+        at = {n.removeprefix("at_"): finite(v) for n, v in row.items() if n[:3] == "at_"}
+        rest = {n: _plain(v) for n, v in row.items() if n[:3] != "at_"}
+        rows.append({"point": rest.pop("point"), "at": at, **rest})
+    return rows
+
+
+def _plain(value: Any) -> Any:
+    return value if isinstance(value, str) else finite(value)

@@ -1,0 +1,166 @@
+"""The stages that the command line and pipelines share: audit to a ledger, compare, look back."""
+
+import os
+from collections.abc import Mapping
+from contextlib import ExitStack
+from dataclasses import dataclass
+from typing import Any
+
+from ssaudit.auditing import Progress, audit_parts
+from ssaudit.bank import ModelBank
+from ssaudit.criteria import Criteria
+from ssaudit.csv_table import CsvWriter
+from ssaudit.drifting import TOLERANCE, Drift, drift
+from ssaudit.ledger import LoggedRun, RunWriter, describe_run, find_logged, find_run, run_digest
+from ssaudit.loop.model import Loop
+from ssaudit.summary import Summary, Tally
+
+Path = str | os.PathLike[str]
+
+
+@dataclass(frozen=True, eq=False)
+class AuditReport:
+    """What an audit found, and what it was made of.
+
+    Attributes
+    ----------
+    summary : Summary
+        Counts, worst points and what they miss.
+    about : dict
+        Content of the run's ``run.json``: inputs, digests, versions, settings.
+    bank, loop, criteria : str
+        Names of the files, for the reader.
+    formula : str
+        How the loop was closed.
+    run : LoggedRun or None
+        The run in the ledger; None when no ledger was named.
+    already_logged : bool
+        Whether the ledger held the same run before.
+    """
+
+    summary: Summary
+    about: Mapping[str, Any]
+    bank: str
+    loop: str
+    criteria: str
+    formula: str
+    run: LoggedRun | None = None
+    already_logged: bool = False
+
+
+def stream_audit(
+    bank: ModelBank,
+    loop: Loop,
+    criteria: Criteria,
+    *,
+    ledger: Path | None = None,
+    csv: Path | None = None,
+    depth: str = "modes",
+    worst: int = 10,
+    workers: int | None = None,
+    progress: Progress | None = None,
+) -> AuditReport:
+    """Audit a bank of any size in bounded memory, logging it on the way.
+
+    Parameters
+    ----------
+    bank, loop, criteria
+        As for `ssaudit.audit`.
+    ledger : path, optional
+        Ledger to log the run in. The same bank, loop, criteria, depth and version are logged once.
+    csv : path, optional
+        CSV file for the points table.
+    depth : str
+        "poles" or "modes".
+    worst : int
+        How many of the worst points the summary lists.
+    workers : int, optional
+        Worker threads; one a processor when absent.
+    progress : callable, optional
+        Called as ``progress(stage, done, total)``.
+
+    Returns
+    -------
+    AuditReport
+
+    Raises
+    ------
+    SsauditError
+        When the inputs do not fit each other, or an output cannot be written; then nothing is.
+    """
+    tally = Tally(bank.revision, criteria, worst)
+    logged, writer = None, None
+    with ExitStack() as outputs:
+        if ledger is not None:
+            digest = run_digest(bank, loop, criteria, depth)
+            logged = find_logged(ledger, digest)
+            if logged is None:
+                writer = outputs.enter_context(RunWriter(ledger, digest, bank.points.units))
+        table = outputs.enter_context(CsvWriter(csv)) if csv is not None else None
+        for part in audit_parts(
+            bank, loop, criteria, depth=depth, workers=workers, progress=progress
+        ):
+            tally.add(part.points, part.values, part.shortfall, part.missed)
+            if writer is not None:
+                writer.append(part)
+            if table is not None:
+                table.append(part.points)
+        summary = tally.result()
+        about = describe_run(bank, loop, criteria, depth, summary)
+        if table is not None:
+            table.commit()
+        run = writer.commit(about) if writer is not None else logged
+    return AuditReport(
+        summary,
+        about,
+        bank.name,
+        loop.name,
+        criteria.name,
+        loop.formula,
+        run,
+        already_logged=logged is not None,
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class Comparison:
+    """Two runs of a ledger, and what changed between them.
+
+    Attributes
+    ----------
+    before, after : LoggedRun
+        The runs.
+    drift : Drift
+        What changed.
+    """
+
+    before: LoggedRun
+    after: LoggedRun
+    drift: Drift
+
+
+def compare_runs(
+    ledger: Path, before: str, after: str, *, tolerance: float = TOLERANCE
+) -> Comparison:
+    """Compare two runs of a ledger.
+
+    Parameters
+    ----------
+    ledger : path
+        The ledger's folder.
+    before, after : str
+        Revisions (their newest run) or runs.
+    tolerance : float
+        Share of each coordinate's range within which coordinates are the same.
+
+    Returns
+    -------
+    Comparison
+
+    Raises
+    ------
+    SsauditError
+        When there are no such runs, or they share no points.
+    """
+    runs = find_run(ledger, before), find_run(ledger, after)
+    return Comparison(*runs, drift(*runs, tolerance=tolerance))

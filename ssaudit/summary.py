@@ -1,0 +1,233 @@
+"""What an audit comes down to: counts, the worst points, what they miss; in constant memory."""
+
+from collections import Counter
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ssaudit.criteria import STABILITY, Criteria
+from ssaudit.judging import VERDICTS
+
+Columns = Mapping[str, NDArray[Any]]
+# Reasons for void points that are told apart; the rest is counted together.
+MOST_REASONS = 1000
+
+
+@dataclass(frozen=True)
+class Missed:
+    """How many points miss one requirement, and which by most.
+
+    Attributes
+    ----------
+    name : str
+        The requirement; "stability" for the one that is always there.
+    limits : str
+        What it asks for, with quantity and unit.
+    points : int
+        How many points miss it.
+    worst_point : str
+        The point that misses it by most; "" when none does.
+    worst_value : float
+        The quantity there.
+    at : dict of float
+        Coordinates there.
+    between : dict of (low, high)
+        Ranges of the coordinates of all points that miss it.
+    """
+
+    name: str
+    limits: str
+    points: int
+    worst_point: str
+    worst_value: float
+    at: Mapping[str, float]
+    between: Mapping[str, tuple[float, float]]
+
+
+@dataclass(frozen=True)
+class Summary:
+    """What an audit comes down to.
+
+    Attributes
+    ----------
+    revision : str
+        Name of the model revision.
+    counts : dict of int
+        Points by verdict: ok, short, lost, doubt, void.
+    worst : tuple of dict
+        The worst points that are not ok, worst first: columns of the points table.
+    missed : tuple of Missed
+        Stability, then each requirement of the criteria.
+    void : dict of int
+        Void points by reason, the most frequent first.
+    held : int
+        Points at which the gain table's edge value was held.
+    between : dict of (low, high)
+        Ranges of the coordinates of all judged points.
+    max_real, min_damping : float
+        Worst of all judged points [1/s; no unit]; NaN when there is none.
+    """
+
+    revision: str
+    counts: Mapping[str, int]
+    worst: tuple[Mapping[str, Any], ...]
+    missed: tuple[Missed, ...]
+    void: Mapping[str, int]
+    held: int
+    between: Mapping[str, tuple[float, float]]
+    max_real: float
+    min_damping: float
+
+    @property
+    def total(self) -> int:
+        """Number of points."""
+        return sum(self.counts.values())
+
+    @property
+    def all_ok(self) -> bool:
+        """Whether every point is ok."""
+        return self.counts["ok"] == self.total
+
+
+class Tally:
+    """Sums up an audit as its chunks come in.
+
+    Parameters
+    ----------
+    revision : str
+        Name of the model revision.
+    criteria : Criteria
+        What is judged by.
+    worst : int
+        How many of the worst points to keep.
+    """
+
+    def __init__(self, revision: str, criteria: Criteria, worst: int) -> None:
+        self._revision = revision
+        self._criteria = criteria
+        self._keep = worst
+        self._counts: Counter[str] = Counter()
+        self._void: Counter[str] = Counter()
+        self._worst: list[tuple[tuple[float, ...], dict[str, Any]]] = []
+        size = 1 + len(criteria.requirements)
+        self._missed = np.zeros(size, dtype=np.int64)
+        self._missed_by = np.full(size, -np.inf)
+        self._missed_at: list[tuple[str, float, dict[str, float]]] = [("", np.nan, {})] * size
+        self._between: list[dict[str, tuple[float, float]]] = [{} for _ in range(size)]
+        self._all_between: dict[str, tuple[float, float]] = {}
+        self._held = 0
+        self._extremes = (np.nan, np.nan)
+        self._seen = 0
+
+    def add(
+        self,
+        points: Columns,
+        values: NDArray[np.float64],
+        shortfall: NDArray[np.float64],
+        missed: NDArray[np.bool_],
+    ) -> None:
+        """Take in the points of a chunk.
+
+        Parameters
+        ----------
+        points : dict of (points,) arrays
+            Columns of the points table.
+        values, shortfall, missed : (points, requirements) arrays
+            As in `ssaudit.auditing.Part`.
+        """
+        verdicts = points["verdict"]
+        for name in VERDICTS:
+            self._counts[name] += int(np.count_nonzero(verdicts == name))
+        self._held += int(np.count_nonzero(points["held"]))
+        self._add_void(points["reason"][verdicts == "void"])
+        self._add_worst(points)
+        _widen(self._all_between, points, np.flatnonzero(verdicts != "void"))
+        lost = verdicts == "lost"
+        self._add_missed(0, points, lost, points["max_real"], points["max_real"])
+        for column in range(missed.shape[1]):
+            self._add_missed(
+                column + 1, points, missed[:, column], shortfall[:, column], values[:, column]
+            )
+        judged = verdicts != "void"
+        self._extremes = (
+            float(np.fmax.reduce(points["max_real"][judged], initial=self._extremes[0])),
+            float(np.fmin.reduce(points["min_damping"][judged], initial=self._extremes[1])),
+        )
+        self._seen += len(verdicts)
+
+    def _add_void(self, reasons: NDArray[Any]) -> None:
+        for reason, count in Counter(reasons.tolist()).items():
+            known = reason in self._void or len(self._void) < MOST_REASONS
+            self._void[reason if known else "other reasons"] += count
+
+    def _add_worst(self, points: Columns) -> None:
+        # VERDICTS run from the best to the worst.
+        severity = np.zeros(len(points["verdict"]), dtype=np.int64)
+        for rank, name in enumerate(VERDICTS):
+            severity[points["verdict"] == name] = rank
+        depth = np.where(points["verdict"] == "short", points["shortfall"], points["max_real"])
+        depth = np.nan_to_num(depth, nan=-np.inf)
+        order = np.lexsort((-depth, -severity))[: self._keep]
+        for row in order[severity[order] > 0]:
+            record = {name: column[row] for name, column in points.items()}
+            key = (-float(severity[row]), -float(depth[row]), float(self._seen + row))
+            self._worst.append((key, record))
+        self._worst = sorted(self._worst, key=lambda item: item[0])[: self._keep]
+
+    def _add_missed(
+        self,
+        place: int,
+        points: Columns,
+        missed: NDArray[np.bool_],
+        by: NDArray[np.float64],
+        value: NDArray[np.float64],
+    ) -> None:
+        rows = np.flatnonzero(missed)
+        self._missed[place] += len(rows)
+        if not len(rows):
+            return
+        _widen(self._between[place], points, rows)
+        row = rows[np.argmax(by[rows])]
+        if by[row] > self._missed_by[place]:
+            self._missed_by[place] = by[row]
+            at = {n[3:]: float(points[n][row]) for n in points if n.startswith("at_")}
+            self._missed_at[place] = (str(points["point"][row]), float(value[row]), at)
+
+    def result(self) -> Summary:
+        """Return what was summed up so far."""
+        names = [(STABILITY, "all poles decay")]
+        for requirement in self._criteria.requirements:
+            asked = f"{requirement.quantity} {requirement.limits} {requirement.unit}".rstrip()
+            names.append((requirement.name, asked))
+        missed = tuple(
+            Missed(name, limits, int(count), point, value, at, between)
+            for (name, limits), count, (point, value, at), between in zip(
+                names, self._missed, self._missed_at, self._between, strict=True
+            )
+        )
+        return Summary(
+            self._revision,
+            {name: self._counts[name] for name in ("ok", "short", "lost", "doubt", "void")},
+            tuple(record for _, record in self._worst),
+            missed,
+            dict(self._void.most_common()),
+            self._held,
+            self._all_between,
+            *self._extremes,
+        )
+
+
+def _widen(
+    between: dict[str, tuple[float, float]], points: Columns, rows: NDArray[np.int64]
+) -> None:
+    """Widen ranges of coordinates to take in some points."""
+    if not len(rows):
+        return
+    for name, column in points.items():
+        if name.startswith("at_"):
+            here = column[rows]
+            low, high = between.get(name[3:], (np.inf, -np.inf))
+            between[name[3:]] = min(low, float(here.min())), max(high, float(here.max()))
