@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 
+from ssaudit.arrow import arrow_array
 from ssaudit.errors import SsauditError
 
 # A cell that begins so is run as a formula by spreadsheets.
@@ -64,9 +65,11 @@ class CsvWriter:
         from pyarrow import csv
 
         arrays = {
-            harmless(name): pa.array([harmless(text) for text in column], pa.string())
-            if column.dtype == object
-            else pa.array(np.asarray(column), from_pandas=True)
+            harmless(name): arrow_array(
+                np.array([harmless(text) for text in column], dtype=object)
+                if column.dtype == object
+                else column
+            )
             for name, column in columns.items()
         }
         table = pa.table(arrays)

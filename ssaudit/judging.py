@@ -10,7 +10,7 @@ from ssaudit.bank import Points
 from ssaudit.criteria import STABILITY, Criteria, Requirement
 from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_constant
 from ssaudit.modes.radii import damping_ratio_radius
-from ssaudit.modes.stacked import Modes
+from ssaudit.modes.stacked import Modes, distinct_rows
 
 Floats = NDArray[np.float64]
 # From the best to the worst for sorting; a void point could not be judged.
@@ -242,9 +242,15 @@ def _short_reasons(requirement: Requirement, value: Floats) -> NDArray[np.object
     unit = f" {requirement.unit}".rstrip()
     least = -np.inf if requirement.at_least is None else requirement.at_least
     most = np.inf if requirement.at_most is None else requirement.at_most
-    below = _join(head, "%.3g", value, f"{unit}, ", "%.2g", least - value, f" below {least:g}")
-    above = _join(head, "%.3g", value, f"{unit}, ", "%.2g", value - most, f" above {most:g}")
-    return np.asarray(np.where(value < least, below, above), dtype=object)
+    short = value < least
+    texts = np.empty(len(value), dtype=object)
+    for rows, gap, word, limit in (
+        (short, least - value, "below", least),
+        (~short, value - most, "above", most),
+    ):
+        tail = f" {word} {limit:g}"
+        texts[rows] = _join(head, "%.3g", value[rows], f"{unit}, ", "%.2g", gap[rows], tail)
+    return texts
 
 
 def _doubt_reasons(
@@ -290,7 +296,7 @@ def missed_names(
     """
     every = np.column_stack([lost, missed])
     names = [STABILITY, *(requirement.name for requirement in criteria.requirements)]
-    kinds, inverse = np.unique(every, axis=0, return_inverse=True)
+    kinds, inverse = distinct_rows(every)
     texts = np.empty(len(kinds), dtype=object)
     texts[:] = ["; ".join(n for n, yes in zip(names, kind, strict=True) if yes) for kind in kinds]
-    return np.asarray(texts[inverse.reshape(-1)], dtype=object)
+    return np.asarray(texts[inverse], dtype=object)

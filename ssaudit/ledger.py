@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ssaudit import __version__
+from ssaudit.arrow import arrow_array
 from ssaudit.auditing import Part
 from ssaudit.bank import ModelBank
 from ssaudit.columns import Columns
@@ -294,8 +295,7 @@ class RunWriter:
                 self._files[name] = pq.ParquetWriter(
                     self._folder / f"{name}.parquet",
                     batch.schema,
-                    compression="zstd",
-                    compression_level=1,
+                    compression="lz4",
                     use_dictionary=words,
                 )
             self._files[name].write_table(batch)
@@ -404,15 +404,11 @@ def _concatenated(parts: list[Columns]) -> Columns:
 
 
 def _arrow(column: Any) -> Any:
-    """One column for Arrow: NaN becomes null; a pair is words, and the row of each entry."""
-    import pyarrow as pa
-
+    """One column for Arrow; a pair is words, and which of them each row has."""
     if isinstance(column, tuple):
         row, words = column
-        return pa.array(words, pa.string()).take(pa.array(row))
-    if column.dtype == object:
-        return pa.array(column, pa.string())
-    return pa.array(column, from_pandas=True)
+        return arrow_array(words).take(arrow_array(row))
+    return arrow_array(column)
 
 
 def _sync(path: Path) -> None:
