@@ -70,6 +70,15 @@ class Drift:
         appeared = self.points[self.points["change"] == "appeared"]
         return self.changes["worse"] > 0 or bool((appeared["verdict_to"] != "ok").any())
 
+    def changed(self, change: str) -> "pd.DataFrame":
+        """Return the points with a change of verdict, those that were or became worst first."""
+        rows = self.points[self.points["change"] == change]
+        end = "_from" if change in ("better", "vanished") else "_to"
+        order = rows.assign(rank=rows[f"verdict{end}"].map(RANK)).sort_values(
+            ["rank", f"max_real{end}"], ascending=False, kind="stable", na_position="last"
+        )
+        return order.drop(columns="rank")
+
     def movers(self, count: int) -> "pd.DataFrame":
         """Return the points whose furthest pole moved most, the most worsened first."""
         both = self.points.dropna(subset=["max_real_change"])

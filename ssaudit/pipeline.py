@@ -91,8 +91,8 @@ def read_pipeline(path: str | os.PathLike[str]) -> Pipeline:
     tables = take(about, "revision", list, where=where, error=PipelineError, default=[])
     if not tables:
         raise PipelineError("no revision is given", where=where, do="add a [[revision]] table")
-    ledger = folder / _text(about, "ledger", where)
-    banks = folder / _text(about, "banks", where)
+    ledger = _beside(folder, _text(about, "ledger", where))
+    banks = _beside(folder, _text(about, "banks", where))
     shared = {key: about[key] for key in SHARED if key in about}
     revisions = []
     for number, table in enumerate(tables, start=1):
@@ -118,14 +118,19 @@ def _read_revision(table: dict[str, Any], folder: Path, banks: Path, where: str)
     layout = take(table, "layout", str, where=where, error=PipelineError)
     return Revision(
         name,
-        tuple(folder / source for source in sources),
+        tuple(_beside(folder, source) for source in sources),
         banks / f"{name}.h5",
-        folder / _text(table, "loop", where),
-        folder / _text(table, "criteria", where),
-        folder / layout if layout else None,
+        _beside(folder, _text(table, "loop", where)),
+        _beside(folder, _text(table, "criteria", where)),
+        _beside(folder, layout) if layout else None,
         depth,
         take(table, "compare", str, where=where, error=PipelineError),
     )
+
+
+def _beside(folder: Path, path: str) -> Path:
+    """Resolve a path against the pipeline's folder, as short as it can be written."""
+    return Path(os.path.normpath(folder / path))
 
 
 def _text(table: dict[str, Any], key: str, where: str) -> str:

@@ -38,9 +38,33 @@ def participation(
     array([[[1., 0.],
             [0., 1.]]])
     """
-    factors = np.abs(np.swapaxes(right, 1, 2) * left)
+    return participation_of_modes(np.swapaxes(right, 1, 2), left)
+
+
+def participation_of_modes(
+    right: NDArray[np.complex128], left: NDArray[np.complex128]
+) -> NDArray[np.float64]:
+    """Participation factors of single modes, of whichever points.
+
+    Parameters
+    ----------
+    right, left : (..., states) complex
+        Right and left eigenvector of each mode.
+
+    Returns
+    -------
+    (..., states) float
+        As from `participation`.
+
+    Examples
+    --------
+    >>> participation_of_modes(np.array([[3.0, 1.0]]), np.array([[0.25, 0.25]]))
+    array([[0.75, 0.25]])
+    """
+    factors = np.abs(right * left)
     with np.errstate(invalid="ignore"):
-        return np.asarray(factors / factors.sum(axis=2, keepdims=True))
+        factors /= factors.sum(axis=-1, keepdims=True)
+    return factors
 
 
 def top_states(
@@ -109,5 +133,7 @@ def state_names(index: NDArray[np.int64], states: Sequence[str]) -> NDArray[np.o
         code = code * base + (column + 1)
     codes, first, inverse = np.unique(code, return_index=True, return_inverse=True)
     texts = np.empty(len(codes), dtype=object)
-    texts[:] = [", ".join(states[i] for i in index[row] if i >= 0) for row in first]
+    # A name that holds the separator itself would read as two.
+    plain = [name.replace(", ", ",") for name in states]
+    texts[:] = [", ".join(plain[i] for i in index[row] if i >= 0) for row in first]
     return np.asarray(texts[inverse], dtype=object)

@@ -7,7 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.modes.neutral import neutral_states
-from ssaudit.modes.participation import TOP, participation, top_states
+from ssaudit.modes.participation import TOP, participation_of_modes, top_states
 from ssaudit.modes.poles import find_modes, find_poles
 from ssaudit.modes.quantities import continuous_poles
 from ssaudit.modes.radii import continuous_radius, pole_radii
@@ -28,7 +28,8 @@ class Modes:
     z : (points, n) complex or None
         Poles of sampled models themselves.
     index : (points, n, top) int or None
-        States that take part most in each mode; None where vectors were not computed.
+        States that take part most in each mode, -1 in the second mode of a pair; None where
+        vectors were not computed.
     share : (points, n, top) float or None
         Their participation.
     """
@@ -102,9 +103,13 @@ def find_usable_modes(
         radius[rows, :k] = pole_radii(
             part, found, right, left, entry_error=error, distance=distance
         )
-        top, shares = top_states(participation(right, left).reshape(-1, k))
-        index[rows, :k] = np.where(top >= 0, kept[top], -1).reshape(-1, k, TOP)
-        share[rows, :k] = shares.reshape(-1, k, TOP)
+        # Both modes of a conjugate pair have the same participation; the first one is enough.
+        first = found.imag >= 0
+        factors = participation_of_modes(np.swapaxes(right, 1, 2)[first], left[first])
+        top, shares = top_states(factors)
+        point, mode = np.nonzero(first)
+        index[rows[point], mode] = np.where(top >= 0, kept[top], -1)
+        share[rows[point], mode] = shares
     if dt > 0:
         s, off = continuous_poles(poles, dt), continuous_radius(poles, radius, dt)
         return Modes(s, off, poles, index, share), failed

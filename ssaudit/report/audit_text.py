@@ -93,7 +93,8 @@ def participating(point: Mapping[str, Any]) -> dict[str, float]:
     dict of float
         Empty at a depth at which participation is not computed.
     """
-    names = [name for name in str(point.get("top_states", "")).split(", ") if name]
+    text = str(point.get("top_states", ""))
+    names = text.split(", ") if text else []
     return {name: float(point[f"participation_{i}"]) for i, name in enumerate(names, 1)}
 
 

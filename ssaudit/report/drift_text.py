@@ -41,9 +41,9 @@ def drift_text(comparison: Comparison, most: int = 8) -> RenderableType:
     parts += [Text(), *_verdicts(comparison), Text(), *_movement(comparison)]
     units = after.about["units"]
     for change in CHANGES:
-        rows = found.points[found.points["change"] == change]
+        rows = found.changed(change)
         if len(rows):
-            parts += [Text(), *_points(f"{change} ({len(rows)})", _worst_first(rows), units, most)]
+            parts += [Text(), *_points(f"{change} ({len(rows)})", rows, units, most)]
     movers = found.movers(most)
     if len(movers):
         parts += [Text(), *_points("largest movers", movers, units, most)]
@@ -72,10 +72,6 @@ def _movement(comparison: Comparison) -> list[Text]:
         quantiles = [number(moved[key], 3) for key in ("q000", "q005", "q050", "q095", "q100")]
         rows.append([NAMES[name], f"{moved['worse']:.0f}", f"{moved['better']:.0f}", *quantiles])
     return aligned(headings, "lrrrrrrr", rows)
-
-
-def _worst_first(rows: Any) -> Any:
-    return rows.sort_values("max_real_to", ascending=False, kind="stable", na_position="last")
 
 
 def _points(title: str, rows: Any, units: Any, most: int) -> list[Text]:

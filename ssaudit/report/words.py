@@ -111,7 +111,7 @@ def aligned(
     >>> [line.plain for line in aligned(["state", "share"], "lr", [["pitch", "0.61"]])]
     ['state  share', 'pitch   0.61']
     """
-    head = [Text(heading, style="dim") for heading in headings]
+    head = [Text(printable(heading), style="dim") for heading in headings]
     cells = [[c if isinstance(c, Text) else Text(printable(c)) for c in row] for row in rows]
     table = [head, *cells]
     widths = [max(row[i].cell_len for row in table) for i in range(len(headings))]
