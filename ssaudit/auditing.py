@@ -16,8 +16,9 @@ from ssaudit.criteria import Criteria
 from ssaudit.errors import BankError, SsauditError
 from ssaudit.judging import judge
 from ssaudit.loop.model import ClosedModels, Loop
-from ssaudit.modes.radii import closed_loop_entry_error
+from ssaudit.modes.radii import closed_loop_entry_error, rounding_error
 from ssaudit.modes.stacked import find_usable_modes
+from ssaudit.settling import settle
 from ssaudit.summary import Summary, Tally
 
 if TYPE_CHECKING:
@@ -67,11 +68,14 @@ class Audit:
         A row a mode, conjugate pairs once, columns as in the ledger.
     summary : Summary
         Counts, worst points and what they miss.
+    ids_given : bool
+        Whether the export named its points; otherwise they are numbered.
     """
 
     points: "pd.DataFrame"
     modes: "pd.DataFrame"
     summary: Summary
+    ids_given: bool = True
 
 
 def audit(
@@ -132,7 +136,10 @@ def audit(
         points.append(pd.DataFrame(part.points))
         modes.append(pd.DataFrame(named_modes(part)))
     return Audit(
-        pd.concat(points, ignore_index=True), pd.concat(modes, ignore_index=True), tally.result()
+        pd.concat(points, ignore_index=True),
+        pd.concat(modes, ignore_index=True),
+        tally.result(),
+        bank.ids_given,
     )
 
 
@@ -272,13 +279,24 @@ def audit_chunk(
     closed = loop.close(section, points, matrices)
     if "E" in section.matrices:
         closed.void[closed.void == ""] = "descriptor models (E) are not judged by this version"
-    error = _entry_error(section, closed, matrices, loop) if depth == "modes" else None
     neutral = [i for i, name in enumerate(section.states) if name in criteria.neutral]
+
+    def entry_error(rows: NDArray[np.int64]) -> NDArray[np.float64] | None:
+        return find_entry_error(section, closed, matrices, loop, rows)
+
+    deep = depth != "poles"
+    everywhere = np.arange(len(points))
     modes, failed = find_usable_modes(
-        closed.A, closed.void == "", error, dt=section.dt, neutral=neutral, vectors=depth != "poles"
+        closed.A,
+        closed.void == "",
+        entry_error(everywhere) if deep else None,
+        dt=section.dt,
+        neutral=neutral,
+        vectors=deep,
     )
     closed.void[failed & (closed.void == "")] = "the eigenvalue iteration did not converge"
     judgement = judge(modes, points, closed.void, criteria)
+    judgement = settle(judgement, modes, closed.A, entry_error, neutral=neutral)
     return Part(
         point_columns(revision, section, points, closed, modes, judgement, criteria),
         mode_columns(section, closed, modes),
@@ -288,19 +306,45 @@ def audit_chunk(
     )
 
 
-def _entry_error(
-    section: Section, closed: ClosedModels, matrices: Matrices, loop: Loop
+def find_entry_error(
+    section: Section,
+    closed: ClosedModels,
+    matrices: Matrices,
+    loop: Loop,
+    rows: NDArray[np.int64],
 ) -> NDArray[np.float64] | None:
-    """How far the entries of the closed matrices may be off."""
+    """How far the entries of closed matrices may be off, by rounding of export and of closing.
+
+    Parameters
+    ----------
+    section : Section
+        Says how many digits the exporter wrote.
+    closed : ClosedModels
+        The closed models.
+    matrices : dict of (points, rows, columns) float
+        What they were closed from.
+    loop : Loop
+        How.
+    rows : (k,) int
+        The points wanted.
+
+    Returns
+    -------
+    (k, n, n) float or None
+        None: not at all.
+    """
     if closed.K is None:
-        return None
+        if section.digits is None:
+            return None
+        return rounding_error(closed.A[rows], section.digits)
+    # Void points may hold NaN or infinity; what comes of them is not used.
     with np.errstate(all="ignore"):
         return closed_loop_entry_error(
-            matrices["A"],
-            matrices["B"],
-            matrices.get("C"),
-            matrices.get("D"),
-            closed.K,
+            matrices["A"][rows],
+            matrices["B"][rows],
+            matrices["C"][rows] if "C" in matrices else None,
+            matrices["D"][rows] if "D" in matrices else None,
+            closed.K[rows] if len(closed.K) > 1 else closed.K,
             sign=-1 if loop.sign == "negative" else 1,
             feed="states" if loop.feed == "states" else "outputs",
             digits=section.digits,

@@ -37,6 +37,8 @@ class Judgement:
         The worst value of each requirement's quantity; NaN where it does not apply.
     shortfall : (points, requirements) float
         How much of its limit each requirement is missed by; negative where it is met.
+    unsure : (points,) bool
+        Where the poles cannot tell whether the point is stable.
     """
 
     verdict: NDArray[np.int64]
@@ -45,6 +47,7 @@ class Judgement:
     missed: NDArray[np.bool_]
     value: Floats
     shortfall: Floats
+    unsure: NDArray[np.bool_]
 
 
 def quantity_range(
@@ -125,11 +128,11 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
         reason[deeper] = _short_reasons(requirement, result.value[deeper])
         worst[deeper] = result.mode[deeper]
         deepest[deeper] = result.shortfall[deeper]
-    _judge_stability(modes, verdict, reason, worst)
+    unsure = _judge_stability(modes, verdict, reason, worst)
     is_void = void != ""
     verdict[is_void], reason[is_void], worst[is_void] = VOID, void[is_void], -1
     missed[is_void] = False
-    return Judgement(verdict, reason, worst, missed, value, shortfall)
+    return Judgement(verdict, reason, worst, missed, value, shortfall, unsure)
 
 
 def _furthest_right(s: NDArray[np.complex128]) -> NDArray[np.int64]:
@@ -143,8 +146,8 @@ def _judge_stability(
     verdict: NDArray[np.int64],
     reason: NDArray[np.object_],
     worst: NDArray[np.int64],
-) -> None:
-    """Overrule verdicts where a pole is not surely to the left of the axis."""
+) -> NDArray[np.bool_]:
+    """Overrule verdicts where a pole is not surely to the left of the axis; say where in doubt."""
     with np.errstate(invalid="ignore"):
         surely = modes.s.real - modes.radius >= 0
         maybe = modes.s.real + modes.radius >= 0
@@ -158,6 +161,7 @@ def _judge_stability(
     at = modes.s.real[rows, furthest[rows]]
     off = modes.radius[rows, furthest[rows]]
     reason[rows] = _join("stability: real part ", "%.3g", at, " ± ", "%.1g", off, " 1/s reaches 0")
+    return np.asarray(doubt)
 
 
 def _lost_reasons(counts: NDArray[np.int64], sampled: bool) -> NDArray[np.object_]:

@@ -239,7 +239,7 @@ def _slice_radii(
     A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None, distance: Floats
 ) -> Floats:
     """Radii (points, n) of a stack small enough for the cache."""
-    F = _coupling(A, poles, V, W, E)
+    F = coupling_bound(A, poles, V, W, E)
     gap = np.abs(poles[:, :, None] - poles[:, None, :])
     np.einsum("pii->pi", gap)[:] = np.inf
     radii, isolated = _isolated_radii(F, gap)
@@ -260,8 +260,31 @@ def _slice_radii(
     return radii
 
 
-def _coupling(A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None) -> Floats:
-    """Bound F on the entries of V⁻¹(A + δA)V - Λ; inf where the left vectors are of no use."""
+def coupling_bound(
+    A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None
+) -> Floats:
+    """Bound the entries of V⁻¹(A + δA)V - Λ, the matrix whose disks hold the true poles.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        State matrices.
+    poles, V, W : complex arrays
+        Poles, right and left vectors from `ssaudit.modes.poles.find_modes`.
+    E : (points, n, n) float or None
+        Absolute uncertainty of every entry of A.
+
+    Returns
+    -------
+    (points, n, n) float
+        F of `pole_radii`; inf where the left vectors are of no use.
+
+    Examples
+    --------
+    >>> one = np.ones((1, 1, 1))
+    >>> coupling_bound(-one, np.array([[-1.0 + 0j]]), one + 0j, one + 0j, 0.1 * one).round(6)
+    array([[[0.1]]])
+    """
     points, n = poles.shape
     gamma = (n + 4) * EPS
     size = np.abs(V)
