@@ -16,7 +16,7 @@ def arrow_array(column: NDArray[Any]) -> Any:
     Parameters
     ----------
     column : (rows,) array
-        float64, int64, bool, or objects that are str.
+        float64, int64, bool, objects that are str, or int8: 1 yes, 0 no, -1 unknown (null).
 
     Returns
     -------
@@ -36,6 +36,9 @@ def arrow_array(column: NDArray[Any]) -> Any:
     if column.dtype == bool:
         bits = pa.py_buffer(np.packbits(column, bitorder="little"))
         return pa.Array.from_buffers(pa.bool_(), len(column), [None, bits])
+    if column.dtype == np.int8:
+        masks = (np.packbits(mask, bitorder="little") for mask in (column >= 0, column == 1))
+        return pa.Array.from_buffers(pa.bool_(), len(column), [pa.py_buffer(m) for m in masks])
     kind = {"f": pa.float64(), "i": pa.int64()}[column.dtype.kind]
     data = pa.py_buffer(np.ascontiguousarray(column, dtype=f"{column.dtype.kind}8"))
     missing = np.isnan(column) if column.dtype.kind == "f" else np.zeros(0, dtype=bool)

@@ -5,55 +5,29 @@ from collections import deque
 from collections.abc import Callable, Iterator
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from itertools import islice
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from ssaudit.bank import Matrices, MatrixDigest, ModelBank, Points, Section, bank_digest, chunks_of
-from ssaudit.columns import Columns, mode_columns, point_columns
+from ssaudit.chunk import DEPTHS, PROVE, Part, Settings, audit_chunk
+from ssaudit.columns import Columns
 from ssaudit.criteria import Criteria
 from ssaudit.errors import BankError, SsauditError
-from ssaudit.judging import judge
-from ssaudit.loop.model import ClosedModels, Loop
-from ssaudit.modes.radii import closed_loop_entry_error, rounding_error
-from ssaudit.modes.stacked import find_usable_modes
-from ssaudit.settling import settle
+from ssaudit.loop.model import Loop
+from ssaudit.modes.proof import import_flint
 from ssaudit.summary import Summary, Tally
 
 if TYPE_CHECKING:
     import pandas as pd
 
-DEPTHS = ("poles", "modes")
 # Bytes of state matrices in one chunk: small enough for the processor's cache, large enough that
 # handing chunks over costs nothing.
 CHUNK_BYTES = 2_000_000
 # Chunks in flight beyond the one that each worker holds.
 AHEAD = 2
 Progress = Callable[[str, int, int], None]
-
-
-@dataclass(frozen=True, eq=False)
-class Part:
-    """Audited points of one chunk, column by column.
-
-    Attributes
-    ----------
-    points : dict of (points,) arrays
-        A row a point; columns as in the ledger.
-    modes : dict of (modes,) arrays
-        A row a mode, conjugate pairs once; ``row`` is the point's row in ``points``.
-    values, shortfall : (points, requirements) float
-        Worst value of each requirement's quantity, and how far it is beyond the limit.
-    missed : (points, requirements) bool
-        Which requirements are missed.
-    """
-
-    points: Columns
-    modes: Columns
-    values: NDArray[np.float64]
-    shortfall: NDArray[np.float64]
-    missed: NDArray[np.bool_]
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,6 +58,7 @@ def audit(
     criteria: Criteria,
     *,
     depth: str = "modes",
+    prove: str = "",
     workers: int | None = None,
     chunk: int | None = None,
     worst: int = 10,
@@ -100,6 +75,8 @@ def audit(
         What they are judged by.
     depth : str
         "poles", or "modes" (adds eigenvectors, participation and how far each pole may be off).
+    prove : str
+        "doubt", "worst" or "all": settle these points by proof, which needs the extra ``prove``.
     workers : int, optional
         Worker threads; one a processor when absent.
     chunk : int, optional
@@ -133,7 +110,7 @@ def audit(
     points, modes = [], []
     for part in audit_parts(bank, loop, criteria, depth=depth, workers=workers, chunk=chunk):
         tally.add(part.points, part.values, part.shortfall, part.missed)
-        points.append(pd.DataFrame(part.points))
+        points.append(pd.DataFrame(_for_pandas(part.points)))
         modes.append(pd.DataFrame(named_modes(part)))
     return Audit(
         pd.concat(points, ignore_index=True),
@@ -141,6 +118,16 @@ def audit(
         tally.result(),
         bank.ids_given,
     )
+
+
+def _for_pandas(columns: Columns) -> dict[str, Any]:
+    """Columns with yes, no and unknown as pandas writes them."""
+    import pandas as pd
+
+    return {
+        name: pd.arrays.BooleanArray(column == 1, column < 0) if column.dtype == np.int8 else column
+        for name, column in columns.items()
+    }
 
 
 def named_modes(part: Part) -> Columns:
@@ -160,16 +147,21 @@ def audit_parts(
     criteria: Criteria,
     *,
     depth: str = "modes",
+    prove: str = "",
     workers: int | None = None,
     chunk: int | None = None,
+    worst: int = 10,
     progress: Progress | None = None,
 ) -> Iterator[Part]:
     """Audit a bank chunk by chunk, in the order of its points, in bounded memory.
 
     Parameters
     ----------
-    bank, loop, criteria, depth, workers, chunk
+    bank, loop, criteria, depth, prove, workers, chunk
         As for `audit`.
+    worst : int
+        How many points count as the worst, where these are to be proved; they are found by an
+        audit of their own.
     progress : callable, optional
         Called as ``progress(stage, done, total)`` in points.
 
@@ -183,29 +175,45 @@ def audit_parts(
         When loop or criteria do not fit the bank, or the bank's matrices are not those that its
         digest was made of.
     """
-    if depth not in DEPTHS:
-        raise SsauditError(f"depth is {depth!r}", do=f"choose one of {', '.join(DEPTHS)}")
+    for name, value, valid in (("depth", depth, DEPTHS), ("prove", prove, ("", *PROVE))):
+        if value not in valid:
+            raise SsauditError(f"{name} is {value!r}", do=f"choose one of {', '.join(valid)}")
     loop.check(bank)
     criteria.check(bank)
+    if prove:
+        import_flint()
+    chosen: str | frozenset[int] = prove
+    if prove == "worst":
+        tally = Tally(bank.revision, criteria, worst)
+        for part in _parts(bank, Settings(loop, criteria, depth), workers, chunk, progress):
+            tally.add(part.points, part.values, part.shortfall, part.missed)
+        chosen = tally.worst_places
+    yield from _parts(bank, Settings(loop, criteria, depth, chosen), workers, chunk, progress)
+
+
+def _parts(
+    bank: ModelBank,
+    settings: Settings,
+    workers: int | None,
+    chunk: int | None,
+    progress: Progress | None,
+) -> Iterator[Part]:
+    """Audit chunks on worker threads, and yield them in order."""
     number = workers or os.cpu_count() or 1
     digests: list[MatrixDigest] = []
     waiting: deque[Future[Part]] = deque()
     done = 0
+    work = _work(bank, chunk, digests)
     with ThreadPoolExecutor(number) as pool:
         try:
-            for section, points, matrices in _work(bank, chunk, digests):
-                waiting.append(
-                    pool.submit(
-                        audit_chunk, bank.revision, section, points, matrices, loop, criteria, depth
-                    )
-                )
-                while len(waiting) > number + AHEAD:
-                    part = waiting.popleft().result()
-                    done += len(part.values)
-                    yield part
-                    if progress:
-                        progress("audit", done, len(bank))
-            while waiting:
+            while True:
+                for section, points, matrices, offset in islice(
+                    work, number + AHEAD - len(waiting)
+                ):
+                    arguments = bank.revision, section, points, matrices, settings, offset
+                    waiting.append(pool.submit(audit_chunk, *arguments))
+                if not waiting:
+                    break
                 part = waiting.popleft().result()
                 done += len(part.values)
                 yield part
@@ -219,8 +227,8 @@ def audit_parts(
 
 def _work(
     bank: ModelBank, chunk: int | None, digests: list[MatrixDigest]
-) -> Iterator[tuple[Section, Points, Matrices]]:
-    """Chunks of all sections, their digests taken on the way."""
+) -> Iterator[tuple[Section, Points, Matrices, int]]:
+    """Chunks of all sections, with their places; digests are taken on the way."""
     offset = 0
     for section in bank.sections:
         digests.append(MatrixDigest())
@@ -228,11 +236,8 @@ def _work(
         for within, matrices in chunks_of(section, size):
             if bank.stored_digest:
                 digests[-1].update(matrices)
-            yield (
-                section,
-                bank.points.between(offset + within.start, offset + within.stop),
-                matrices,
-            )
+            start, stop = offset + within.start, offset + within.stop
+            yield section, bank.points.between(start, stop), matrices, start
         offset += len(section)
 
 
@@ -245,107 +250,4 @@ def _verify(bank: ModelBank, digests: list[MatrixDigest]) -> None:
             "was changed after it was ingested: its content does not match its digest",
             where=bank.name,
             do="ingest the export again",
-        )
-
-
-def audit_chunk(
-    revision: str,
-    section: Section,
-    points: Points,
-    matrices: Matrices,
-    loop: Loop,
-    criteria: Criteria,
-    depth: str,
-) -> Part:
-    """Close, find the poles of, and judge some points of one section.
-
-    Parameters
-    ----------
-    revision : str
-        Name of the model revision.
-    section : Section
-        Names and sampling time.
-    points : Points
-        The points.
-    matrices : dict of (points, rows, columns) float
-        Their matrices.
-    loop, criteria, depth
-        As for `audit`.
-
-    Returns
-    -------
-    Part
-    """
-    closed = loop.close(section, points, matrices)
-    if "E" in section.matrices:
-        closed.void[closed.void == ""] = "descriptor models (E) are not judged by this version"
-    neutral = [i for i, name in enumerate(section.states) if name in criteria.neutral]
-
-    def entry_error(rows: NDArray[np.int64]) -> NDArray[np.float64] | None:
-        return find_entry_error(section, closed, matrices, loop, rows)
-
-    deep = depth != "poles"
-    everywhere = np.arange(len(points))
-    modes, failed = find_usable_modes(
-        closed.A,
-        closed.void == "",
-        entry_error(everywhere) if deep else None,
-        dt=section.dt,
-        neutral=neutral,
-        vectors=deep,
-    )
-    closed.void[failed & (closed.void == "")] = "the eigenvalue iteration did not converge"
-    judgement = judge(modes, points, closed.void, criteria)
-    judgement = settle(judgement, modes, closed.A, entry_error, neutral=neutral)
-    return Part(
-        point_columns(revision, section, points, closed, modes, judgement, criteria),
-        mode_columns(section, closed, modes),
-        judgement.value,
-        judgement.shortfall,
-        judgement.missed,
-    )
-
-
-def find_entry_error(
-    section: Section,
-    closed: ClosedModels,
-    matrices: Matrices,
-    loop: Loop,
-    rows: NDArray[np.int64],
-) -> NDArray[np.float64] | None:
-    """How far the entries of closed matrices may be off, by rounding of export and of closing.
-
-    Parameters
-    ----------
-    section : Section
-        Says how many digits the exporter wrote.
-    closed : ClosedModels
-        The closed models.
-    matrices : dict of (points, rows, columns) float
-        What they were closed from.
-    loop : Loop
-        How.
-    rows : (k,) int
-        The points wanted.
-
-    Returns
-    -------
-    (k, n, n) float or None
-        None: not at all.
-    """
-    if closed.K is None:
-        if section.digits is None:
-            return None
-        return rounding_error(closed.A[rows], section.digits)
-    # Void points may hold NaN or infinity; what comes of them is not used.
-    with np.errstate(all="ignore"):
-        return closed_loop_entry_error(
-            matrices["A"][rows],
-            matrices["B"][rows],
-            matrices["C"][rows] if "C" in matrices else None,
-            matrices["D"][rows] if "D" in matrices else None,
-            closed.K[rows] if len(closed.K) > 1 else closed.K,
-            sign=-1 if loop.sign == "negative" else 1,
-            feed="states" if loop.feed == "states" else "outputs",
-            digits=section.digits,
         )

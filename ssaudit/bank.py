@@ -160,6 +160,10 @@ class ModelBank:
         Digest recorded when the bank was written; "" for a bank in memory.
     name : str
         File name, for messages.
+    file
+        The open file behind it, if there is one.
+    intake : dict
+        The intake report as it was stored; empty when built from arrays.
     """
 
     revision: str
@@ -170,6 +174,7 @@ class ModelBank:
     stored_digest: str = ""
     name: str = "bank in memory"
     file: Any = field(default=None, repr=False)
+    intake: Mapping[str, Any] = field(default_factory=dict, repr=False)
 
     def __len__(self) -> int:
         return len(self.points)
@@ -247,10 +252,18 @@ def bank_digest(
     total.update(json.dumps(layout, sort_keys=True).encode())
     for name in sorted(points.coordinates):
         total.update(np.ascontiguousarray(points.coordinates[name], dtype="<f8").data)
-    columns = [points.ids, *(points.tags[name] for name in sorted(points.tags)), points.void]
-    for column in columns:
-        total.update("\0".join(column.tolist()).encode("utf-8", "surrogatepass") + b"\0\0")
+    for column in [points.ids, *(points.tags[name] for name in sorted(points.tags)), points.void]:
+        for part in _joined_words(column):
+            total.update(part)
     return total.hexdigest()
+
+
+def _joined_words(words: NDArray[Any], together: int = 50_000) -> Iterator[bytes]:
+    """Bytes of a column of words, each ended by a zero byte, and the column by one more."""
+    for start in range(0, len(words), together):
+        part = "\0".join(words[start : start + together].tolist())
+        yield part.encode("utf-8", "surrogatepass") + b"\0"
+    yield b"\0" if len(words) else b"\0\0"
 
 
 def chunks_of(
@@ -295,6 +308,16 @@ def mark_unusable(points: Points, sections: Sequence[Section]) -> Points:
 
 def _times_claimed(columns: Sequence[NDArray[Any]]) -> NDArray[np.int64]:
     """How many rows share the values of each row."""
+    # Equal rows have equal hashes, so only rows whose hash recurs need an exact comparison.
+    _, place, times = np.unique(_row_hashes(columns), return_inverse=True, return_counts=True)
+    counts: NDArray[np.int64] = np.ones(len(columns[0]), dtype=np.int64)
+    recurring = np.flatnonzero(times[place] > 1)
+    if recurring.size:
+        counts[recurring] = _times_claimed_exactly([column[recurring] for column in columns])
+    return counts
+
+
+def _times_claimed_exactly(columns: Sequence[NDArray[Any]]) -> NDArray[np.int64]:
     code = np.zeros(len(columns[0]), dtype=np.int64)
     for column in columns:
         _, values = np.unique(column, return_inverse=True)
@@ -302,6 +325,22 @@ def _times_claimed(columns: Sequence[NDArray[Any]]) -> NDArray[np.int64]:
         code = np.unique(code * (values.max(initial=0) + 1) + values, return_inverse=True)[1]
     counts: NDArray[np.int64] = np.bincount(code, minlength=1)[code]
     return counts
+
+
+def _row_hashes(columns: Sequence[NDArray[Any]]) -> NDArray[np.uint64]:
+    """Hash of each row: equal for equal values, nearly always different for others."""
+    hashes = np.zeros(len(columns[0]), dtype=np.uint64)
+    for column in columns if len(hashes) else ():
+        if column.dtype.kind == "f":
+            # Zero and minus zero are one value, and so are all kinds of NaN.
+            column = np.where(np.isnan(column), np.nan, column + 0.0)
+        words = np.ascontiguousarray(column).view(np.uint32).reshape(len(column), -1)
+        for word in words.T:
+            # An odd multiplier (2^64 over the golden ratio) and a shift spread the bits; unsigned
+            # products wrap around, which is meant.
+            hashes = (hashes ^ word) * np.uint64(0x9E3779B97F4A7C15)
+            hashes ^= hashes >> np.uint64(29)
+    return hashes
 
 
 def non_finite_reasons(matrices: Matrices, points: Points) -> NDArray[np.object_]:

@@ -4,7 +4,7 @@ import contextlib
 import json
 import os
 import tempfile
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -29,6 +29,8 @@ SCHEMA = 1
 # Bytes of one HDF5 chunk: just under the library's chunk cache of 1 MiB, so that a chunk that two
 # reads share is fetched once.
 CHUNK_BYTES = 900_000
+# Numbers written with this many significant digits are as good as the 64-bit numbers themselves.
+FULL_PRECISION = 16
 # Bytes of small batches that wait to be written together.
 BUFFER_BYTES = 4_000_000
 
@@ -43,10 +45,39 @@ class Batch:
         The points; their ``void`` says which of them cannot be used, and why.
     section : Section
         Names, sampling time and the matrices of these points, as arrays.
+    digits_seen : int or None
+        Most significant digits that an entry was written with, found by inspection; a section
+        gets the most of all its batches.
+    named : frozenset of str
+        Those of "states", "inputs", "outputs" whose names the export states.
     """
 
     points: Points
     section: Section
+    digits_seen: int | None = None
+    named: frozenset[str] = frozenset()
+
+
+@dataclass(frozen=True, eq=False)
+class Settled:
+    """What a bank holds, once points have been checked against each other.
+
+    Attributes
+    ----------
+    points : Points
+        All points, section by section.
+    sections : tuple of Section
+        The sections in their order.
+    numbers : tuple of int
+        The number that `BankWriter.append` gave for each section.
+    digests : tuple of MatrixDigest
+        Digests of their matrices.
+    """
+
+    points: Points
+    sections: tuple[Section, ...]
+    numbers: tuple[int, ...]
+    digests: tuple[MatrixDigest, ...]
 
 
 @dataclass(eq=False)
@@ -59,6 +90,7 @@ class _OpenSection:
     points: list[Points] = field(default_factory=list)
     waiting: list[Section] = field(default_factory=list)
     waiting_bytes: int = 0
+    digits_seen: int | None = None
 
 
 class BankWriter:
@@ -85,11 +117,17 @@ class BankWriter:
         self.path = path
         self.revision = revision
         self._sections: dict[tuple[Any, ...], _OpenSection] = {}
+        self._settled: Settled | None = None
+        self._new_folders: list[Path] = []
         try:
-            path.parent.mkdir(parents=True, exist_ok=True)
-            handle, name = tempfile.mkstemp(prefix=f".{path.name}-", dir=path.parent)
+            if path.is_dir():
+                raise BankError("is a folder", where=str(path), do="name the bank's file")
+            path.exists()
+            self._new_folders = _make_folders(path.parent)
+            handle, name = tempfile.mkstemp(prefix=f".{path.name[:100]}-", dir=path.parent)
             os.close(handle)
-        except OSError as error:
+        except (OSError, ValueError) as error:
+            self._remove_folders()
             raise _unwritable(path, error) from error
         self._temporary = Path(name)
         self._file = h5py.File(self._temporary, "w", libver="latest")
@@ -98,24 +136,84 @@ class BankWriter:
         return self
 
     def __exit__(self, *_: object) -> None:
-        self._file.close()
+        # After a write failed for want of space, closing fails as well; the file goes anyway.
+        with contextlib.suppress(OSError, RuntimeError):
+            self._file.close()
         self._temporary.unlink(missing_ok=True)
+        self._remove_folders()
 
-    def append(self, batch: Batch) -> None:
-        """Add points to the section that has their names and shapes."""
+    def _remove_folders(self) -> None:
+        """Remove the folders that were made for a bank that did not come about."""
+        with contextlib.suppress(OSError):
+            for folder in reversed(self._new_folders):
+                folder.rmdir()
+
+    def append(self, batch: Batch) -> int:
+        """Add points to the section that has their names and shapes.
+
+        Parameters
+        ----------
+        batch : Batch
+            The points.
+
+        Returns
+        -------
+        int
+            Number of the section, by first appearance.
+        """
         section = batch.section
         shapes = [(name, stack.shape[1:]) for name, stack in sorted(section.matrices.items())]
-        key = (*section.description.items(), *shapes)
-        number = len(self._sections)
-        target = self._sections.setdefault(_hashable(key), _OpenSection(number, section))
+        key = _hashable((*section.description.items(), *shapes))
+        target = self._sections.get(key)
+        if target is None:
+            target = self._sections[key] = _OpenSection(len(self._sections), section)
         target.points.append(batch.points)
         target.waiting.append(section)
         target.waiting_bytes += sum(int(np.prod(m.shape)) * 8 for m in section.matrices.values())
+        if batch.digits_seen is not None:
+            target.digits_seen = max(target.digits_seen or 0, batch.digits_seen)
         if target.waiting_bytes > BUFFER_BYTES:
             self._flush(target)
+        return target.number
 
-    def finish(self, sources: Sequence[Source], *, ids_given: bool) -> str:
-        """Write what remains, check points against each other, and put the file in its place.
+    def settle(self) -> Settled:
+        """Write what remains and check points against each other; no more can be added then.
+
+        Returns
+        -------
+        Settled
+
+        Raises
+        ------
+        BankError
+            When there is no usable point.
+        """
+        if self._settled is not None:
+            return self._settled
+        # Points without stackable matrices stand last, so that the first section is a real one.
+        opened = sorted(self._sections.values(), key=lambda s: not s.section.states)
+        for target in opened:
+            self._flush(target)
+        points = _join([part for target in opened for part in target.points])
+        for target in opened:
+            target.points.clear()
+        sections = tuple(_finished(target, self._file) for target in opened)
+        points = mark_unusable(points, sections)
+        if not np.any(points.void == ""):
+            raise BankError(_why_none(points), where=self.path.name, do="mend the export")
+        numbers = tuple(target.number for target in opened)
+        digests = tuple(target.digest for target in opened)
+        self._settled = Settled(points, sections, numbers, digests)
+        return self._settled
+
+    def finish(
+        self,
+        sources: Sequence[Source],
+        *,
+        ids_given: bool,
+        intake: Mapping[str, Any] | None = None,
+    ) -> str:
+        """Write what remains, and put the file in its place.
 
         Parameters
         ----------
@@ -123,6 +221,8 @@ class BankWriter:
             The files that the points came from.
         ids_given : bool
             Whether the export named its points.
+        intake : dict, optional
+            The intake report, as JSON can hold it. It is no part of the digest.
 
         Returns
         -------
@@ -134,39 +234,33 @@ class BankWriter:
         BankError
             When there is no usable point, or the file cannot be put in its place.
         """
-        # Points without stackable matrices stand last, so that the first section is a real one.
-        opened = sorted(self._sections.values(), key=lambda s: not s.section.states)
-        for target in opened:
-            self._flush(target)
-        points = _join([part for target in opened for part in target.points])
-        sections = [
-            replace(target.section, matrices=dict(self._file[f"sections/{target.number}"]))
-            for target in opened
-        ]
-        points = mark_unusable(points, sections)
-        if not np.any(points.void == ""):
-            raise BankError(_why_none(points), where=", ".join(s.name for s in sources[:3]))
-        digests = [target.digest for target in opened]
-        digest = bank_digest(self.revision, ids_given, points, sections, digests)
-        self._write_points(points)
-        self._file.attrs.update(
-            {
-                "format": FORMAT,
-                "schema": SCHEMA,
-                "revision": self.revision,
-                "ids_given": ids_given,
-                "digest": digest,
-                "sources": json.dumps([vars(source) for source in sources]),
-                "sections": json.dumps(
-                    [{**t.section.description, "number": t.number} for t in opened]
-                ),
-            }
+        settled = self.settle()
+        digest = bank_digest(
+            self.revision, ids_given, settled.points, settled.sections, settled.digests
         )
-        self._file.close()
+        about = [
+            {**section.description, "number": number}
+            for section, number in zip(settled.sections, settled.numbers, strict=True)
+        ]
         try:
+            self._write_points(settled.points)
+            _write_json(self._file, "sources", [vars(source) for source in sources])
+            _write_json(self._file, "sections_about", about)
+            _write_json(self._file, "intake", dict(intake or {}))
+            self._file.attrs.update(
+                {
+                    "format": FORMAT,
+                    "schema": SCHEMA,
+                    "revision": self.revision,
+                    "ids_given": ids_given,
+                    "digest": digest,
+                }
+            )
+            self._file.close()
             _put_in_place(self._temporary, self.path)
-        except OSError as error:
+        except (OSError, RuntimeError) as error:
             raise _unwritable(self.path, error) from error
+        self._new_folders = []
         return digest
 
     def _flush(self, target: _OpenSection) -> None:
@@ -174,16 +268,12 @@ class BankWriter:
             return
         group = self._file.require_group(f"sections/{target.number}")
         for name in target.section.matrices:
-            block = np.concatenate([part.matrices[name][:] for part in target.waiting])
+            parts = [part.matrices[name][:] for part in target.waiting]
+            block = parts[0] if len(parts) == 1 else np.concatenate(parts)
             target.digest.update({name: block})
-            if name not in group:
-                _create(group, name, block.shape[1:])
-            dataset = group[name]
-            stored = dataset.shape[0]
             try:
-                dataset.resize(stored + len(block), axis=0)
-                dataset[stored:] = block
-            except OSError as error:
+                _extend(group, name, block)
+            except (OSError, RuntimeError) as error:
                 raise _unwritable(self.path, error) from error
         target.waiting.clear()
         target.waiting_bytes = 0
@@ -222,7 +312,11 @@ def read_bank(path: str | os.PathLike[str]) -> ModelBank:
     import h5py
 
     path = Path(path)
-    if not path.is_file():
+    try:
+        there = path.is_file()
+    except (OSError, ValueError):
+        there = False
+    if not there:
         raise BankError("there is no such bank", where=str(path), do="make it with ssaudit ingest")
     try:
         file = h5py.File(path, "r")
@@ -252,7 +346,7 @@ def _read(file: Any, path: Path) -> ModelBank:
             do="ingest the export again",
         )
     sections = []
-    for about in json.loads(file.attrs["sections"]):
+    for about in _read_json(file, "sections_about"):
         group = file[f"sections/{about['number']}"]
         matrices = {name: group[name] for name in about["matrices"]}
         names = check_shapes(matrices, about["states"], about["inputs"], about["outputs"])
@@ -271,7 +365,7 @@ def _read(file: Any, path: Path) -> ModelBank:
     )
     if sum(len(section) for section in sections) != len(points):
         raise BankError("is a damaged bank: its sections and its points differ", where=str(path))
-    sources = tuple(Source(**source) for source in json.loads(file.attrs["sources"]))
+    sources = tuple(Source(**source) for source in _read_json(file, "sources"))
     return ModelBank(
         str(file.attrs["revision"]),
         points,
@@ -281,7 +375,23 @@ def _read(file: Any, path: Path) -> ModelBank:
         str(file.attrs["digest"]),
         path.name,
         file,
+        _read_json(file, "intake"),
     )
+
+
+def _extend(group: Any, name: str, block: NDArray[np.float64]) -> None:
+    """Write matrices of more points behind those that are there."""
+    stored = group[name].shape[0] if name in group else 0
+    if block[:1].size == 0:
+        # Blocks of no size cannot be stored in parts; the number of points is all there is.
+        if name in group:
+            del group[name]
+        group.create_dataset(name, shape=(stored + len(block), *block.shape[1:]), dtype="<f8")
+        return
+    if name not in group:
+        _create(group, name, block.shape[1:])
+    group[name].resize(stored + len(block), axis=0)
+    group[name][stored:] = block
 
 
 def _create(group: Any, name: str, shape: tuple[int, ...]) -> None:
@@ -293,6 +403,34 @@ def _create(group: Any, name: str, shape: tuple[int, ...]) -> None:
         chunks=(rows, *(max(1, size) for size in shape)),
         dtype="<f8",
     )
+
+
+def _write_json(file: Any, name: str, content: Any) -> None:
+    """Store structured content as UTF-8 bytes; attributes could not hold that of many files."""
+    encoded = json.dumps(content, allow_nan=False).encode()
+    file.create_dataset(name, data=np.frombuffer(encoded, dtype=np.uint8))
+
+
+def _read_json(file: Any, name: str) -> Any:
+    return json.loads(file[name][:].tobytes())
+
+
+def _finished(target: _OpenSection, file: Any) -> Section:
+    """Return a section with its datasets, and the digits that inspection found."""
+    section, digits = target.section, target.digits_seen
+    if section.digits is None and digits is not None and digits < FULL_PRECISION:
+        section = replace(section, digits=digits)
+    return replace(section, matrices=dict(file[f"sections/{target.number}"]))
+
+
+def _make_folders(folder: Path) -> list[Path]:
+    """Make a folder and those above it; return the ones that are new, the topmost first."""
+    new = [parent for parent in (folder, *folder.parents) if not parent.exists()]
+    made: list[Path] = []
+    for parent in reversed(new):
+        parent.mkdir(exist_ok=True)
+        made.append(parent)
+    return made
 
 
 def _write_words(group: Any, name: str, words: Any) -> None:
@@ -374,7 +512,6 @@ def _put_in_place(temporary: Path, path: Path) -> None:
         os.close(folder)
 
 
-def _unwritable(path: Path, error: OSError) -> BankError:
-    return BankError(
-        f"cannot be written ({error.strerror or error})", where=str(path), do="choose another place"
-    )
+def _unwritable(path: Path, error: Exception) -> BankError:
+    reason = getattr(error, "strerror", None) or " ".join(str(error).split())[:160]
+    return BankError(f"cannot be written ({reason})", where=str(path), do="choose another place")

@@ -1,7 +1,9 @@
 """The command line: arguments → one library call → a report and an exit code."""
 
 import argparse
+import io
 import os
+import shutil
 import sys
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
@@ -56,9 +58,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         print("ssaudit: interrupted", file=sys.stderr)
         return INTERRUPTED
     except BrokenPipeError:
-        # The reader of the output has gone; writing the rest at exit would fail again.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return CANNOT_RUN
+        return CANNOT_RUN  # the reader of the output has gone, and with it who could be told why
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -109,6 +109,12 @@ def _add_audit(commands: Any) -> None:
         default="modes",
         help="poles: the fast look; modes (default): vectors, participation, trust",
     )
+    parser.add_argument(
+        "--prove",
+        choices=("doubt", "worst", "all"),
+        default="",
+        help="settle these points by exact or ball arithmetic (needs the extra: prove)",
+    )
     _add_worst(parser)
     _add_json(parser)
     parser.add_argument("--csv", type=Path, metavar="FILE", help="write the points table as CSV")
@@ -120,8 +126,16 @@ def _add_audit(commands: Any) -> None:
 def _add_drift(commands: Any) -> None:
     parser = _add(commands, "drift", _drift, "compare two runs of a ledger point by point")
     parser.add_argument("ledger", type=Path, metavar="LEDGER", help="the ledger")
-    parser.add_argument("--from", required=True, dest="before", metavar="REV_OR_RUN")
-    parser.add_argument("--to", required=True, dest="after", metavar="REV_OR_RUN")
+    parser.add_argument(
+        "--from",
+        required=True,
+        dest="before",
+        metavar="REV_OR_RUN",
+        help="the earlier: a revision (its newest run) or a run",
+    )
+    parser.add_argument(
+        "--to", required=True, dest="after", metavar="REV_OR_RUN", help="the later, likewise"
+    )
     parser.add_argument(
         "--tolerance",
         type=_share,
@@ -198,11 +212,12 @@ def _ingest(options: argparse.Namespace) -> int:
 def _audit(options: argparse.Namespace) -> int:
     from ssaudit.bank_file import read_bank
     from ssaudit.criteria import read_criteria
-    from ssaudit.loop.files import read_loop
+    from ssaudit.loop.files import files_of_loop, read_loop
     from ssaudit.stages import stream_audit
 
-    _refuse_overwriting((options.bank, options.loop, options.criteria), options.json, options.csv)
     loop, criteria = read_loop(options.loop), read_criteria(options.criteria)
+    inputs = (options.bank, options.criteria, *files_of_loop(options.loop))
+    _check_outputs(inputs, options.json, options.csv)
     with read_bank(options.bank) as bank, _progress() as progress:
         report = stream_audit(
             bank,
@@ -211,6 +226,7 @@ def _audit(options: argparse.Namespace) -> int:
             ledger=options.ledger,
             csv=options.csv,
             depth=options.depth,
+            prove=options.prove,
             worst=options.worst,
             workers=options.workers,
             progress=progress,
@@ -272,19 +288,24 @@ def _run(options: argparse.Namespace) -> int:
     return code
 
 
-def _refuse_overwriting(inputs: Sequence[Path], *outputs: str | Path | None) -> None:
+def _check_outputs(inputs: Sequence[Path], *outputs: str | Path | None) -> None:
+    """Refuse outputs that cannot be written or would overwrite, before there is work to lose."""
+    taken = {path.resolve(): "is an input and an output" for path in inputs}
     for output in outputs:
         if output in (None, "-"):
             continue
-        for path in inputs:
-            if Path(str(output)).resolve() == path.resolve():
-                raise SsauditError("is an input and an output", where=str(output),
-                                   do="choose another output")  # fmt: skip
+        path = Path(str(output))
+        problem = taken.get(path.resolve(), "")
+        if path.is_dir() or not path.parent.is_dir():
+            problem = "is a folder" if path.is_dir() else "lies in no folder that there is"
+        if problem:
+            raise SsauditError(problem, where=str(output), do="choose another output")
+        taken[path.resolve()] = "is to hold two outputs"
 
 
 def _write_json(text: str, target: str) -> None:
     if target == "-":
-        print(text)
+        _print(text + "\n")
         return
     try:
         Path(target).write_text(text + "\n", encoding="utf-8")
@@ -296,10 +317,35 @@ def _write_json(text: str, target: str) -> None:
 def _show(renderable: "RenderableType") -> None:
     from rich.console import Console
 
-    known = sys.stdout.isatty() or "COLUMNS" in os.environ
-    console = Console(width=None if known else WIDTH, highlight=False, markup=False, emoji=False)
+    screen = io.StringIO()
+    console = Console(
+        file=screen,
+        force_terminal=True if sys.stdout is not None and sys.stdout.isatty() else None,
+        width=shutil.get_terminal_size((WIDTH, 0)).columns,
+        highlight=False,
+        markup=False,
+        emoji=False,
+    )
     console.print(renderable)
     console.print()
+    _print(screen.getvalue())
+
+
+def _print(text: str) -> None:
+    """Write to standard output at once, so that what fails fails here and not at exit."""
+    if sys.stdout is None:
+        raise SsauditError("is closed", where="standard output", do="open it, or use --json FILE")
+    encoding = sys.stdout.encoding or "utf-8"
+    try:
+        sys.stdout.write(text.encode(encoding, "replace").decode(encoding))
+        sys.stdout.flush()
+    except OSError as error:
+        # What is left in the buffer would fail again at exit.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        if isinstance(error, BrokenPipeError):
+            raise
+        raise SsauditError(f"cannot be written ({error.strerror})", where="standard output",
+                           do="write it elsewhere") from error  # fmt: skip
 
 
 @contextmanager
@@ -307,7 +353,7 @@ def _progress() -> Iterator["Progress"]:
     """Show progress on stderr, and none where nobody watches."""
     from ssaudit.intake.ingest import no_progress
 
-    if not sys.stderr.isatty():
+    if sys.stderr is None or not sys.stderr.isatty():
         yield no_progress
         return
     from rich.console import Console

@@ -41,6 +41,7 @@ def point_columns(
         **{f"tag_{name}": column.astype(object) for name, column in points.tags.items()},
         "verdict": np.array(VERDICTS, dtype=object)[judgement.verdict],
         "reason": judgement.reason,
+        "doubt": judgement.doubt,
         "missed": missed_names(judgement.missed, judgement.verdict == LOST, criteria),
         "max_real": _extreme(np.fmax, modes.s.real),
         "min_damping": _extreme(np.fmin, ratios),
@@ -51,6 +52,9 @@ def point_columns(
         "time_constant": time_constant(s),
         "shortfall": _deepest(judgement),
         "held": closed.held,
+        "infinite_poles": np.zeros(count, dtype=np.int64)
+        if modes.infinite is None
+        else modes.infinite,
     }
     if modes.index is not None and modes.share is not None:
         top, share = np.full((count, TOP), -1), np.full((count, TOP), np.nan)
@@ -83,7 +87,8 @@ def _deepest(judgement: Judgement) -> NDArray[np.float64]:
 
 def mode_columns(section: Section, closed: ClosedModels, modes: Modes) -> Columns:
     """Columns of the modes table, in the ledger's order; conjugate pairs once."""
-    keep = (modes.s.imag >= 0) & (closed.void == "")[:, np.newaxis]
+    # Neutral states have no pole: their places are NaN.
+    keep = (modes.s.imag >= 0) & ~np.isnan(modes.s.real) & (closed.void == "")[:, np.newaxis]
     row, _ = np.nonzero(keep)
     s = modes.s[keep]
     columns: Columns = {

@@ -10,7 +10,15 @@ from numpy.typing import NDArray
 
 from ssaudit.bank import ModelBank, Points
 from ssaudit.errors import CriteriaError
-from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
+from ssaudit.settings import (
+    check_keys,
+    is_finite_number,
+    nearest,
+    read_toml,
+    shown,
+    take,
+    take_words,
+)
 
 # What can be required of a mode: its unit, for messages.
 MODE_QUANTITIES = {
@@ -20,6 +28,9 @@ MODE_QUANTITIES = {
     "time_constant": "s",
 }
 STABILITY = "stability"
+# What a point may be in doubt about, besides requirements.
+CROSS_CHECK = "cross-check"
+DOUBT_COUNTS_AS = ("not ok", "ok")
 Place = tuple[Any, ...]
 
 
@@ -59,7 +70,8 @@ class Requirement:
     where: Mapping[str, Place] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
-        if not self.name or self.name == STABILITY:
+        # The ledger joins names by "; ".
+        if not self.name or self.name in (STABILITY, CROSS_CHECK) or "; " in self.name:
             raise CriteriaError(f"a requirement cannot be named {self.name!r}")
         if self.quantity not in MODE_QUANTITIES:
             raise CriteriaError(
@@ -97,8 +109,8 @@ class Requirement:
             "quantity": self.quantity,
             "at_least": self.at_least,
             "at_most": self.at_most,
-            "frequency": list(self.frequency) if self.frequency else None,
-            "where": {key: list(place) for key, place in sorted(self.where.items())},
+            "frequency": _plain(self.frequency) if self.frequency else None,
+            "where": {key: _plain(place) for key, place in sorted(self.where.items())},
         }
 
     def applies(self, points: Points) -> NDArray[np.bool_]:
@@ -137,6 +149,9 @@ class Criteria:
         its pole at the origin is exempt.
     name : str
         File name, for messages.
+    doubt : str
+        Whether doubt about a requirement counts as "ok" or as "not ok" for the exit code. Doubt
+        about stability never counts as ok.
 
     Raises
     ------
@@ -147,8 +162,15 @@ class Criteria:
     requirements: tuple[Requirement, ...] = ()
     neutral: tuple[str, ...] = ()
     name: str = "criteria"
+    doubt: str = "not ok"
 
     def __post_init__(self) -> None:
+        if self.doubt not in DOUBT_COUNTS_AS:
+            raise CriteriaError(
+                f"doubt is {self.doubt!r}",
+                where=self.name,
+                do='say whether doubt about a requirement counts as "ok" or as "not ok"',
+            )
         names = [requirement.name for requirement in self.requirements]
         for name in names:
             if names.count(name) > 1:
@@ -160,6 +182,7 @@ class Criteria:
         return {
             "require": [requirement.description for requirement in self.requirements],
             "neutral": sorted(self.neutral),
+            "doubt": self.doubt,
         }
 
     def check(self, bank: ModelBank) -> None:
@@ -203,6 +226,11 @@ class Criteria:
                     )
 
 
+def _plain(place: Place) -> list[Any]:
+    """Ranges and words for JSON, which knows no infinity: its name in its place."""
+    return [v if isinstance(v, str) or np.isfinite(v) else str(v) for v in place]
+
+
 def read_criteria(path: str | os.PathLike[str]) -> Criteria:
     """Read a criteria file.
 
@@ -222,11 +250,12 @@ def read_criteria(path: str | os.PathLike[str]) -> Criteria:
     """
     where = str(path)
     about = read_toml(path, CriteriaError)
-    check_keys(about, ("require", "neutral"), where=where, error=CriteriaError)
+    check_keys(about, ("require", "neutral", "doubt"), where=where, error=CriteriaError)
     neutral = take_words(about, "neutral", where=where, error=CriteriaError) or ()
     tables = take(about, "require", list, where=where, error=CriteriaError, default=[])
     requirements = tuple(_read_requirement(table, i, where) for i, table in enumerate(tables, 1))
-    return Criteria(requirements, neutral, where)
+    doubt = take(about, "doubt", str, where=where, error=CriteriaError, default="not ok")
+    return Criteria(requirements, neutral, where, doubt)
 
 
 def _read_requirement(table: Any, number: int, file: str) -> Requirement:
@@ -268,9 +297,8 @@ def _read_place(place: Any, key: str, where: str) -> Place:
 
 
 def _read_range(value: Any, key: str, where: str) -> tuple[float, float]:
-    numbers = isinstance(value, list) and len(value) == 2
-    if not numbers or any(isinstance(v, bool) or not isinstance(v, int | float) for v in value):
-        raise CriteriaError(f"{key} is {value!r}, not a range [low, high]", where=where)
-    if any(np.isnan(v) for v in value):
-        raise CriteriaError(f"{key} holds NaN", where=where)
+    # An open end is infinite; NaN is no end.
+    ends = isinstance(value, list) and len(value) == 2
+    if not ends or not all(is_finite_number(v) or v in (np.inf, -np.inf) for v in value):
+        raise CriteriaError(f"{key} is {shown(value)}, not a range [low, high]", where=where)
     return float(value[0]), float(value[1])

@@ -30,6 +30,11 @@ class Run(Protocol):
         """The points table."""
         ...
 
+    @property
+    def ids_given(self) -> bool:
+        """Whether the export named its points."""
+        ...
+
 
 @dataclass(frozen=True, eq=False)
 class Drift:
@@ -121,8 +126,7 @@ def drift(a: Run, b: Run, *, tolerance: float = TOLERANCE) -> Drift:
     1
     """
     before, after = a.points, b.points
-    named = getattr(a, "ids_given", True) and getattr(b, "ids_given", True)
-    by_id = named and bool(np.isin(before["point"], after["point"]).any())
+    by_id = (a.ids_given and b.ids_given) and bool(np.isin(before["point"], after["point"]).any())
     if by_id:
         keys = [_numbered(before["point"]), _numbered(after["point"])]
     else:
@@ -176,12 +180,18 @@ def _clusters(values: NDArray[np.float64], tolerance: float) -> NDArray[np.int64
     """Give one number to values that lie within the tolerance of their neighbour."""
     order = np.argsort(values, kind="stable")
     ordered = values[order]
-    spread = np.nanmax(values) - np.nanmin(values) if np.isfinite(values).any() else 0.0
     with np.errstate(invalid="ignore"):
-        apart = np.diff(ordered) > tolerance * max(spread, np.finfo(float).tiny)
+        apart = np.diff(ordered) > _nearness(values, tolerance)
     numbers = np.empty(len(values), dtype=np.int64)
     numbers[order] = np.concatenate([[0], np.cumsum(apart | np.isnan(ordered[1:]))])
     return numbers
+
+
+def _nearness(values: NDArray[np.float64], tolerance: float) -> float:
+    """Distance within which coordinates are the same; infinite ones have no part in their range."""
+    finite = values[np.isfinite(values)]
+    spread = float(np.ptp(finite)) if len(finite) else 0.0
+    return tolerance * max(spread, float(np.finfo(float).tiny))
 
 
 def _join(before: "pd.DataFrame", after: "pd.DataFrame") -> "pd.DataFrame":
@@ -234,10 +244,9 @@ def _count_relocated(joined: "pd.DataFrame", shared: Sequence[str], tolerance: f
     apart = np.zeros(len(joined), dtype=bool)
     for name in shared:
         old, new = (joined[name + end].to_numpy(dtype=float) for end in ("_from", "_to"))
-        both = np.concatenate([old, new])
-        spread = np.nanmax(both) - np.nanmin(both) if np.isfinite(both).any() else 0.0
+        near = _nearness(np.concatenate([old, new]), tolerance)
         with np.errstate(invalid="ignore"):
-            apart |= np.abs(new - old) > tolerance * max(spread, np.finfo(float).tiny)
+            apart |= np.abs(new - old) > near
     return int(np.count_nonzero(apart))
 
 

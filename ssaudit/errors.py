@@ -24,7 +24,9 @@ class SsauditError(Exception):
         self.where = where
         self.do = do
         line = (f"{where}: " if where else "") + what + (f"; {do}" if do else "")
-        super().__init__(" ".join(line.split()))
+        # Names from files may hold what would steer a terminal.
+        line = "".join(c if c.isprintable() else "\ufffd" for c in " ".join(line.split()))
+        super().__init__(line)
 
 
 class SourceError(SsauditError):

@@ -37,8 +37,10 @@ class Judgement:
         The worst value of each requirement's quantity; NaN where it does not apply.
     shortfall : (points, requirements) float
         How much of its limit each requirement is missed by; negative where it is met.
-    unsure : (points,) bool
-        Where the poles cannot tell whether the point is stable.
+    doubt : (points,) object
+        What a point in doubt is in doubt about: "stability" or a requirement's name; else "".
+    by_requirements : tuple of (verdict, reason, worst, doubt)
+        The same, were the point known to be stable: what a proof of stability leaves.
     """
 
     verdict: NDArray[np.int64]
@@ -47,7 +49,10 @@ class Judgement:
     missed: NDArray[np.bool_]
     value: Floats
     shortfall: Floats
-    unsure: NDArray[np.bool_]
+    doubt: NDArray[np.object_]
+    by_requirements: tuple[
+        NDArray[np.int64], NDArray[np.object_], NDArray[np.int64], NDArray[np.object_]
+    ]
 
 
 def quantity_range(
@@ -110,7 +115,7 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
     """
     count, size = modes.s.shape[0], len(criteria.requirements)
     verdict = np.full(count, OK)
-    reason = np.full(count, "", dtype=object)
+    reason, about = np.full(count, "", dtype=object), np.full(count, "", dtype=object)
     worst = _furthest_right(modes.s)
     missed = np.zeros((count, size), dtype=bool)
     value, shortfall = np.full((count, size), np.nan), np.full((count, size), -np.inf)
@@ -121,18 +126,20 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
         missed[:, column] = result.missed
         value[:, column], shortfall[:, column] = result.value, result.shortfall
         doubtful = result.doubt & (verdict != SHORT) & (verdict != DOUBT)
-        verdict[doubtful] = DOUBT
+        verdict[doubtful], about[doubtful] = DOUBT, requirement.name
         reason[doubtful] = _doubt_reasons(requirement, result, doubtful)
         deeper = result.missed & (result.shortfall > deepest)
-        verdict[deeper] = SHORT
+        verdict[deeper], about[deeper] = SHORT, ""
         reason[deeper] = _short_reasons(requirement, result.value[deeper])
         worst[deeper] = result.mode[deeper]
         deepest[deeper] = result.shortfall[deeper]
+    by_requirements = verdict.copy(), reason.copy(), worst.copy(), about.copy()
     unsure = _judge_stability(modes, verdict, reason, worst)
+    about[verdict == LOST], about[unsure] = "", STABILITY
     is_void = void != ""
     verdict[is_void], reason[is_void], worst[is_void] = VOID, void[is_void], -1
-    missed[is_void] = False
-    return Judgement(verdict, reason, worst, missed, value, shortfall, unsure)
+    missed[is_void], about[is_void] = False, ""
+    return Judgement(verdict, reason, worst, missed, value, shortfall, about, by_requirements)
 
 
 def _furthest_right(s: NDArray[np.complex128]) -> NDArray[np.int64]:

@@ -2,12 +2,13 @@
 
 import contextlib
 import datetime
+import fcntl
 import hashlib
 import json
 import os
 import shutil
 import tempfile
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -17,8 +18,8 @@ import numpy as np
 
 from ssaudit import __version__
 from ssaudit.arrow import arrow_array
-from ssaudit.auditing import Part
 from ssaudit.bank import ModelBank
+from ssaudit.chunk import Part
 from ssaudit.columns import Columns
 from ssaudit.criteria import Criteria
 from ssaudit.errors import LedgerError
@@ -34,6 +35,9 @@ FOLDER = "run="
 DIGEST_LENGTH = 12
 # Points whose rows wait to be written as one Parquet row group.
 GROUP_POINTS = 32_768
+# What the commands read of a run.json, besides the counts of verdicts.
+ENTRIES = ("run", "revision", "digest", "ids_given", "units", "max_real", "min_damping")
+COUNTS = ("total", "ok", "short", "lost", "doubt", "void")
 UNITS = {
     "max_real": "1/s",
     "real": "1/s",
@@ -44,20 +48,23 @@ UNITS = {
 }
 
 
-def run_digest(bank: ModelBank, loop: Loop, criteria: Criteria, depth: str) -> str:
+def run_digest(bank: ModelBank, loop: Loop, criteria: Criteria, settings: Mapping[str, str]) -> str:
     """Digest of everything that a run's numbers follow from.
 
     Parameters
     ----------
-    bank, loop, criteria, depth
+    bank, loop, criteria
         As audited.
+    settings : dict of str
+        Depth, and which points are proved.
 
     Returns
     -------
     str
         The same for the same content, wherever the files lie; other with another version.
     """
-    inputs = {**input_digests(bank, loop, criteria), "depth": depth, "version": __version__}
+    inputs: dict[str, Any] = {**input_digests(bank, loop, criteria), "settings": dict(settings)}
+    inputs["version"] = __version__
     return _digest(inputs)[:DIGEST_LENGTH]
 
 
@@ -158,9 +165,11 @@ def _read_run(path: Path) -> LoggedRun:
     try:
         about = json.loads((path / "run.json").read_text(encoding="utf-8"))
         schema = about["schema"]
-        complete = {"run", "revision", "counts", "digest", "ids_given"} <= set(about)
-    except (OSError, ValueError, KeyError, TypeError) as error:
+        complete = set(ENTRIES) <= set(about) and set(COUNTS) <= set(about["counts"])
+    except (OSError, ValueError, RecursionError) as error:
         raise LedgerError(f"cannot be read ({error})", where=where) from error
+    except (KeyError, TypeError) as error:
+        raise LedgerError("is damaged: entries are missing", where=where) from error
     if schema != SCHEMA:
         raise LedgerError(f"has schema {schema}, this version reads {SCHEMA}", where=where)
     if not complete:
@@ -234,11 +243,15 @@ class RunWriter:
         self._units = UNITS | {f"at_{name}": unit for name, unit in units.items()}
         self._files: dict[str, Any] = {}
         self._waiting: list[Part] = []
-        self._made = not self._ledger.exists()
+        self._made: list[Path] = []
         try:
-            self._ledger.mkdir(parents=True, exist_ok=True)
+            for folder in reversed([self._ledger, *self._ledger.parents]):
+                if not folder.exists():
+                    folder.mkdir()
+                    self._made.append(folder)
             self._folder = Path(tempfile.mkdtemp(prefix=".writing-", dir=self._ledger))
         except OSError as error:
+            self._remove_made()
             raise _unwritable(self._ledger, error) from error
 
     def __enter__(self) -> "RunWriter":
@@ -249,10 +262,13 @@ class RunWriter:
             with contextlib.suppress(OSError, ValueError):
                 file.close()
         shutil.rmtree(self._folder, ignore_errors=True)
-        if self._made:
-            # Fails, as it should, when the ledger holds a run by now.
-            with contextlib.suppress(OSError):
-                self._ledger.rmdir()
+        self._remove_made()
+
+    def _remove_made(self) -> None:
+        # Fails, as it should, when the ledger holds a run by now.
+        with contextlib.suppress(OSError):
+            for folder in reversed(self._made):
+                folder.rmdir()
 
     def append(self, part: Part) -> None:
         """Add the points and modes of a chunk."""
@@ -321,37 +337,43 @@ class RunWriter:
             When it cannot be written.
         """
         self._flush()
-        for file in self._files.values():
-            file.close()
+        # To the microsecond, because the newest run of a revision is found by its name.
         now = datetime.datetime.now(datetime.UTC)
-        run = f"{now:%Y%m%dT%H%M%SZ}-{self._digest}"
+        run = f"{now:%Y%m%dT%H%M%S.%fZ}-{self._digest}"
         record = {"schema": SCHEMA, "run": run, "digest": self._digest, **about}
         target = self._ledger / f"{FOLDER}{run}"
         try:
+            for file in self._files.values():
+                file.close()
             text = json.dumps(record, indent=1, allow_nan=False)
             (self._folder / "run.json").write_text(text, encoding="utf-8")
             for path in [*self._folder.iterdir(), self._folder]:
                 _sync(path)
-            logged = find_logged(self._ledger, self._digest)
-            if logged is not None:
-                return logged
-            os.chmod(self._folder, self._ledger.stat().st_mode & 0o777)
-            os.rename(self._folder, target)
-            _sync(self._ledger)
+            with _alone(self._ledger):
+                logged = find_logged(self._ledger, self._digest)
+                if logged is not None:
+                    return logged
+                os.chmod(self._folder, self._ledger.stat().st_mode & 0o777)
+                os.rename(self._folder, target)
+                _sync(self._ledger)
         except OSError as error:
             raise _unwritable(self._ledger, error) from error
         return LoggedRun(target, record)
 
 
 def describe_run(
-    bank: ModelBank, loop: Loop, criteria: Criteria, depth: str, summary: Summary
+    bank: ModelBank,
+    loop: Loop,
+    criteria: Criteria,
+    settings: Mapping[str, str],
+    summary: Summary,
 ) -> dict[str, Any]:
     """Content of a run's ``run.json``: what was audited by what, and what came of it.
 
     Parameters
     ----------
-    bank, loop, criteria, depth
-        As audited.
+    bank, loop, criteria, settings
+        As for `run_digest`.
     summary : Summary
         What came of it.
 
@@ -370,7 +392,8 @@ def describe_run(
         "min_damping": finite(summary.min_damping),
         "digests": input_digests(bank, loop, criteria),
         "versions": _versions(),
-        "settings": {"depth": depth},
+        "settings": dict(settings),
+        "proofs": dict(summary.proofs),
         "ids_given": bank.ids_given,
         "units": dict(bank.points.units),
         "sources": [vars(source) for source in bank.sources],
@@ -409,6 +432,19 @@ def _arrow(column: Any) -> Any:
         row, words = column
         return arrow_array(words).take(arrow_array(row))
     return arrow_array(column)
+
+
+@contextlib.contextmanager
+def _alone(folder: Path) -> Iterator[None]:
+    """Keep other writers waiting, so that none logs the same run between a look and a rename."""
+    handle = os.open(folder, os.O_RDONLY)
+    try:
+        # Some network file systems have no locks; there the moment between the two remains.
+        with contextlib.suppress(OSError):
+            fcntl.flock(handle, fcntl.LOCK_EX)
+        yield
+    finally:
+        os.close(handle)
 
 
 def _sync(path: Path) -> None:

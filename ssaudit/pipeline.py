@@ -6,11 +6,13 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from ssaudit.auditing import DEPTHS, Progress
+from ssaudit.auditing import Progress
 from ssaudit.bank_file import read_bank
+from ssaudit.chunk import DEPTHS
 from ssaudit.criteria import read_criteria
-from ssaudit.errors import PipelineError
+from ssaudit.errors import LedgerError, PipelineError
 from ssaudit.intake.ingest import Intake, ingest, no_progress
+from ssaudit.ledger import find_run
 from ssaudit.loop.files import read_loop
 from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
 from ssaudit.stages import AuditReport, Comparison, compare_runs, stream_audit
@@ -94,12 +96,15 @@ def read_pipeline(path: str | os.PathLike[str]) -> Pipeline:
     ledger = _beside(folder, _text(about, "ledger", where))
     banks = _beside(folder, _text(about, "banks", where))
     shared = {key: about[key] for key in SHARED if key in about}
-    revisions = []
+    revisions: list[Revision] = []
     for number, table in enumerate(tables, start=1):
         place = f"{where}, [[revision]] {number}"
         if not isinstance(table, dict):
             raise PipelineError("is not a table", where=place)
-        revisions.append(_read_revision(shared | table, folder, banks, place))
+        revision = _read_revision(shared | table, folder, banks, place)
+        if any(revision.bank == earlier.bank for earlier in revisions):
+            raise PipelineError(f"a second revision is named {revision.revision!r}", where=place)
+        revisions.append(revision)
     return Pipeline(ledger, tuple(revisions))
 
 
@@ -164,6 +169,8 @@ def run_pipeline(
     pipeline = read_pipeline(path)
     # Loops and criteria are read first: a slip in the last of them should not cost hours.
     stated = [(read_loop(r.loop), read_criteria(r.criteria)) for r in pipeline.revisions]
+    _check_comparisons(pipeline, str(path))
+    audited: dict[str, str] = {}
     for revision, (loop, criteria) in zip(pipeline.revisions, stated, strict=True):
         yield ingest(
             revision.sources,
@@ -173,7 +180,7 @@ def run_pipeline(
             progress=progress or no_progress,
         )
         with read_bank(revision.bank) as bank:
-            yield stream_audit(
+            report = stream_audit(
                 bank,
                 loop,
                 criteria,
@@ -182,5 +189,26 @@ def run_pipeline(
                 worst=worst,
                 progress=progress,
             )
+        yield report
+        # Not the newest run of the revision: that may be another one, if this was logged before.
+        audited[revision.revision] = report.run.run if report.run else revision.revision
         if revision.compare is not None:
-            yield compare_runs(pipeline.ledger, revision.compare, revision.revision)
+            before = audited.get(revision.compare, revision.compare)
+            yield compare_runs(pipeline.ledger, before, audited[revision.revision])
+
+
+def _check_comparisons(pipeline: Pipeline, file: str) -> None:
+    """Check that what is compared with will be there: an earlier revision, or one in the ledger."""
+    earlier: set[str] = set()
+    for number, revision in enumerate(pipeline.revisions, start=1):
+        if revision.compare is not None and revision.compare not in earlier:
+            try:
+                find_run(pipeline.ledger, revision.compare)
+            except LedgerError as error:
+                raise PipelineError(
+                    f"compare = {revision.compare!r} is no revision before it, and in the ledger "
+                    f"{error.what}",
+                    where=f"{file}, [[revision]] {number}",
+                    do=error.do,
+                ) from error
+        earlier.add(revision.revision)

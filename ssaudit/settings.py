@@ -10,6 +10,9 @@ from typing import Any
 
 from ssaudit.errors import SsauditError
 
+# Characters of a value that a message repeats.
+LONGEST_SHOWN = 40
+
 
 def read_toml(path: str | os.PathLike[str], error: type[SsauditError]) -> dict[str, Any]:
     """Read a TOML file.
@@ -37,9 +40,12 @@ def read_toml(path: str | os.PathLike[str], error: type[SsauditError]) -> dict[s
         raise error(f"cannot be read ({problem.strerror})", where=where) from problem
     except UnicodeDecodeError as problem:
         raise error("is not UTF-8 text", where=where) from problem
+    except ValueError as problem:
+        raise error(f"cannot be read ({problem})", where=where) from problem
     try:
         return tomllib.loads(text)
-    except tomllib.TOMLDecodeError as problem:
+    # Not only TOMLDecodeError: a number of thousands of digits is refused by int() itself.
+    except ValueError as problem:
         raise error(f"is not TOML: {problem}", where=where) from problem
     except RecursionError as problem:
         raise error("is nested too deeply", where=where) from problem
@@ -132,13 +138,46 @@ def take(
         return default
     value = table[key]
     if kind is float:
-        if isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value):
+        if is_finite_number(value):
             return float(value)
-        raise error(f"{key} is {value!r}, not a finite number", where=where)
+        raise error(f"{key} is {shown(value)}, not a finite number", where=where)
     if not isinstance(value, kind) or (isinstance(value, bool) and kind is not bool):
         name = kind.__name__ if isinstance(kind, type) else " or ".join(k.__name__ for k in kind)
-        raise error(f"{key} is {value!r}, not {WORDS.get(name, name)}", where=where)
+        raise error(f"{key} is {shown(value)}, not {WORDS.get(name, name)}", where=where)
     return value
+
+
+def is_finite_number(value: Any) -> bool:
+    """Whether a value is a number that fits a float: no truth value, infinity or NaN.
+
+    Examples
+    --------
+    >>> is_finite_number(3), is_finite_number(True), is_finite_number(10**400)
+    (True, False, False)
+    """
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        return False
+    try:
+        return math.isfinite(value)
+    except OverflowError:
+        return False
+
+
+def shown(value: Any) -> str:
+    """Write a value for a message, cut to what a line has room for.
+
+    Examples
+    --------
+    >>> shown("x" * 100)
+    "'xxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxx…"
+    """
+    text = "a very long number" if _is_endless(value) else repr(value)
+    return text if len(text) <= LONGEST_SHOWN else f"{text[: LONGEST_SHOWN - 1]}…"
+
+
+def _is_endless(value: Any) -> bool:
+    """Whether Python refuses to write a whole number out, as it does beyond 4,300 digits."""
+    return isinstance(value, int) and value.bit_length() > 10_000
 
 
 WORDS = {"str": "text", "dict": "a table", "list": "a list", "int": "a whole number"}

@@ -1,24 +1,26 @@
-"""Settling verdicts by evidence beside the poles: cross-checks, and exact grounds for "lost"."""
+"""Settling verdicts by evidence beside the poles: cross-checks, exact grounds, proofs."""
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
+from ssaudit.criteria import CROSS_CHECK, STABILITY
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement
 from ssaudit.modes.evidence import DISAGREEMENTS, GROUNDS, cross_check, exact_not_stable
 from ssaudit.modes.neutral import neutral_states
 from ssaudit.modes.stacked import Modes
 
 Floats = NDArray[np.float64]
+ErrorsOf = Callable[[NDArray[np.int64]], Floats | None]
 
 
 def settle(
     judgement: Judgement,
     modes: Modes,
     A: Floats,
-    entry_error: Callable[[NDArray[np.int64]], Floats | None],
+    entry_error: ErrorsOf,
     *,
     neutral: Sequence[int] = (),
 ) -> Judgement:
@@ -34,7 +36,7 @@ def settle(
     modes : Modes
         The modes they were judged by.
     A : (points, n, n) float
-        Closed-loop state matrices.
+        Closed-loop state matrices of ordinary models.
     entry_error : callable
         Gives for rows of A how far their entries may be off; None: not at all.
     neutral : sequence of int
@@ -47,20 +49,62 @@ def settle(
     sampled = modes.z is not None
     poles = modes.s if modes.z is None else modes.z
     verdict, reason = judgement.verdict.copy(), judgement.reason.copy()
+    about = judgement.doubt.copy()
     judged = (verdict != VOID) & (A.shape[1] > 0)
-    unstable = judged & (verdict == LOST)
-    stable = judged & ~unstable & ~judgement.unsure
-    for row in np.flatnonzero(judgement.unsure & judged):
-        kept = ~neutral_states(A[[row]], np.array(neutral, dtype=np.int64), sampled)[0]
-        error = entry_error(np.array([row]))
-        grounds = exact_not_stable(
-            A[[row]][:, kept][:, :, kept],
-            entry_error=None if error is None else error[:, kept][:, :, kept],
-            sampled=sampled,
-        )[0]
+    unsure = judged & (about == STABILITY)
+    lost = judged & (verdict == LOST)
+    for row in np.flatnonzero(unsure):
+        grounds = _grounds(A, np.array([row]), entry_error, neutral, sampled)
         if grounds:
-            verdict[row], reason[row] = LOST, f"not stable: {GROUNDS[grounds[0]]}"
-    failed = cross_check(A, poles, stable, unstable, sampled=sampled)
+            verdict[row], about[row] = LOST, ""
+            reason[row] = f"not stable: {GROUNDS[grounds[0]]}"
+    failed = cross_check(A, poles, judged & ~lost & ~unsure, lost, sampled=sampled)
     for row in np.flatnonzero(judged & (failed != "")):
-        verdict[row], reason[row] = DOUBT, f"cross-check: {DISAGREEMENTS[str(failed[row])]}"
-    return replace(judgement, verdict=verdict, reason=reason)
+        verdict[row], about[row] = DOUBT, CROSS_CHECK
+        reason[row] = f"cross-check: {DISAGREEMENTS[str(failed[row])]}"
+    return replace(judgement, verdict=verdict, reason=reason, doubt=about)
+
+
+def _grounds(
+    A: Floats,
+    row: NDArray[np.int64],
+    entry_error: ErrorsOf,
+    neutral: Sequence[int],
+    sampled: bool,
+) -> tuple[str, ...]:
+    """Exact grounds why one model is not stable, its neutral states left out."""
+    kept = ~neutral_states(A[row], np.array(neutral, dtype=np.int64), sampled)[0]
+    error = entry_error(row)
+    return exact_not_stable(
+        A[row][:, kept][:, :, kept],
+        entry_error=None if error is None else error[:, kept][:, :, kept],
+        sampled=sampled,
+    )[0]
+
+
+def apply_proofs(judgement: Judgement, outcomes: Mapping[int, tuple[str, str]]) -> Judgement:
+    """Let proofs overrule the verdicts of the points that they are about.
+
+    Parameters
+    ----------
+    judgement : Judgement
+        Verdicts so far.
+    outcomes : dict of (outcome, how)
+        "stable", "unstable" or "open", and by what, by row.
+
+    Returns
+    -------
+    Judgement
+        Proved unstable: lost. Proved stable: what the requirements alone say. Open: as it was.
+    """
+    verdict, reason = judgement.verdict.copy(), judgement.reason.copy()
+    about, worst = judgement.doubt.copy(), judgement.worst.copy()
+    by_verdict, by_reason, by_worst, by_about = judgement.by_requirements
+    for row, (outcome, how) in outcomes.items():
+        if outcome == "unstable":
+            verdict[row], about[row] = LOST, ""
+            reason[row] = f"not stable: proved by {how}"
+        elif outcome == "stable":
+            verdict[row], reason[row] = by_verdict[row], by_reason[row]
+            about[row], worst[row] = by_about[row], by_worst[row]
+    return replace(judgement, verdict=verdict, reason=reason, doubt=about, worst=worst)

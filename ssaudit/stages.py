@@ -56,6 +56,7 @@ def stream_audit(
     ledger: Path | None = None,
     csv: Path | None = None,
     depth: str = "modes",
+    prove: str = "",
     worst: int = 10,
     workers: int | None = None,
     progress: Progress | None = None,
@@ -72,6 +73,8 @@ def stream_audit(
         CSV file for the points table.
     depth : str
         "poles" or "modes".
+    prove : str
+        "doubt", "worst" or "all": settle these points by proof.
     worst : int
         How many of the worst points the summary lists.
     workers : int, optional
@@ -90,15 +93,25 @@ def stream_audit(
     """
     tally = Tally(bank.revision, criteria, worst)
     logged, writer = None, None
+    settings = {"depth": depth, "prove": prove}
+    if prove == "worst":
+        settings["worst"] = str(worst)
     with ExitStack() as outputs:
         if ledger is not None:
-            digest = run_digest(bank, loop, criteria, depth)
+            digest = run_digest(bank, loop, criteria, settings)
             logged = find_logged(ledger, digest)
             if logged is None:
                 writer = outputs.enter_context(RunWriter(ledger, digest, bank.points.units))
         table = outputs.enter_context(CsvWriter(csv)) if csv is not None else None
         for part in audit_parts(
-            bank, loop, criteria, depth=depth, workers=workers, progress=progress
+            bank,
+            loop,
+            criteria,
+            depth=depth,
+            prove=prove,
+            workers=workers,
+            worst=worst,
+            progress=progress,
         ):
             tally.add(part.points, part.values, part.shortfall, part.missed)
             if writer is not None:
@@ -106,7 +119,7 @@ def stream_audit(
             if table is not None:
                 table.append(part.points)
         summary = tally.result()
-        about = describe_run(bank, loop, criteria, depth, summary)
+        about = describe_run(bank, loop, criteria, settings, summary)
         if table is not None:
             table.commit()
         run = writer.commit(about) if writer is not None else logged

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.criteria import STABILITY, Criteria
+from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
 from ssaudit.judging import VERDICTS
 
 Columns = Mapping[str, NDArray[Any]]
@@ -67,6 +67,10 @@ class Summary:
         Points at which the gain table's edge value was held.
     between : dict of (low, high)
         Ranges of the coordinates of all judged points.
+    tolerated : int
+        Points in doubt about a requirement, where the criteria let that count as ok.
+    proofs : dict of int
+        Points by outcome of their proof: stable, unstable, open; empty when none was asked for.
     max_real, min_damping : float
         Worst of all judged points [1/s; no unit]; NaN when there is none.
     """
@@ -78,6 +82,8 @@ class Summary:
     void: Mapping[str, int]
     held: int
     between: Mapping[str, tuple[float, float]]
+    tolerated: int
+    proofs: Mapping[str, int]
     max_real: float
     min_damping: float
 
@@ -88,8 +94,8 @@ class Summary:
 
     @property
     def all_ok(self) -> bool:
-        """Whether every point is ok."""
-        return self.counts["ok"] == self.total
+        """Whether every point is ok, or in doubt that the criteria let count as ok."""
+        return self.counts["ok"] + self.tolerated == self.total
 
 
 class Tally:
@@ -111,14 +117,15 @@ class Tally:
         self._keep = worst
         self._counts: Counter[str] = Counter()
         self._void: Counter[str] = Counter()
-        self._worst: list[tuple[tuple[float, ...], dict[str, Any]]] = []
+        self._worst: list[tuple[tuple[float, float, int], dict[str, Any]]] = []
         size = 1 + len(criteria.requirements)
         self._missed = np.zeros(size, dtype=np.int64)
         self._missed_by = np.full(size, -np.inf)
         self._missed_at: list[tuple[str, float, dict[str, float]]] = [("", np.nan, {})] * size
         self._between: list[dict[str, tuple[float, float]]] = [{} for _ in range(size)]
         self._all_between: dict[str, tuple[float, float]] = {}
-        self._held = 0
+        self._held = self._tolerated = 0
+        self._proofs: Counter[str] = Counter()
         self._extremes = (np.nan, np.nan)
         self._seen = 0
 
@@ -142,6 +149,11 @@ class Tally:
         for name in VERDICTS:
             self._counts[name] += int(np.count_nonzero(verdicts == name))
         self._held += int(np.count_nonzero(points["held"]))
+        if self._criteria.doubt == "ok":
+            grave = np.isin(points["doubt"], ["", STABILITY, CROSS_CHECK])
+            self._tolerated += int(np.count_nonzero((verdicts == "doubt") & ~grave))
+        if "proof" in points:
+            self._proofs.update(outcome for outcome in points["proof"] if outcome)
         self._add_void(points["reason"][verdicts == "void"])
         self._add_worst(points)
         _widen(self._all_between, points, np.flatnonzero(verdicts != "void"))
@@ -173,7 +185,7 @@ class Tally:
         order = np.lexsort((-depth, -severity))[: self._keep]
         for row in order[severity[order] > 0]:
             record = {name: column[row] for name, column in points.items()}
-            key = (-float(severity[row]), -float(depth[row]), float(self._seen + row))
+            key = (-float(severity[row]), -float(depth[row]), self._seen + int(row))
             self._worst.append((key, record))
         self._worst = sorted(self._worst, key=lambda item: item[0])[: self._keep]
 
@@ -196,6 +208,11 @@ class Tally:
             at = {n[3:]: float(points[n][row]) for n in points if n.startswith("at_")}
             self._missed_at[place] = (str(points["point"][row]), float(value[row]), at)
 
+    @property
+    def worst_places(self) -> frozenset[int]:
+        """Places in the bank of the worst points so far."""
+        return frozenset(place for (_, _, place), _ in self._worst)
+
     def result(self) -> Summary:
         """Return what was summed up so far."""
         names = [(STABILITY, "all poles decay")]
@@ -216,6 +233,8 @@ class Tally:
             dict(self._void.most_common()),
             self._held,
             self._all_between,
+            self._tolerated,
+            dict(self._proofs),
             *self._extremes,
         )
 

@@ -1,22 +1,27 @@
-"""Read HDF5 exports in the default layout."""
+"""Read HDF5 exports: arrays whose values all lie in the file itself."""
 
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from ssaudit.bank_file import FORMAT as BANK_FORMAT
 from ssaudit.errors import SourceError
-from ssaudit.intake.plain import PlainExport, damage_reported, matrices_among
+from ssaudit.intake.guard import MOST_POINTS, WHOLE_BYTES, damage_reported
 
-DESCRIPTIONS = ("states", "inputs", "outputs", "dt", "digits")
+# Bytes of blocks that stay decompressed while points are read across them.
+CACHE_BYTES = 16_000_000
+# Names that are listed at the most in one group.
+MOST_NAMES = 5_000_000
 
 
 @contextmanager
-def open_hdf5(path: Path) -> Iterator[PlainExport]:
-    """Open an HDF5 export in the default layout.
+def open_hdf5(path: Path) -> Iterator["Hdf5Container"]:
+    """Open an HDF5 export.
 
     Parameters
     ----------
@@ -26,7 +31,7 @@ def open_hdf5(path: Path) -> Iterator[PlainExport]:
 
     Yields
     ------
-    PlainExport
+    Hdf5Container
 
     Raises
     ------
@@ -36,45 +41,136 @@ def open_hdf5(path: Path) -> Iterator[PlainExport]:
     import h5py
 
     with damage_reported(path, "is not HDF5, or is cut short"):
-        file = h5py.File(path, "r")
+        file = h5py.File(path, "r", rdcc_nbytes=CACHE_BYTES)
     with file:
         with damage_reported(path):
-            export = _opened(file, path)
-        yield export
+            is_bank = file.attrs.get("format") == BANK_FORMAT
+        if is_bank:
+            raise SourceError(
+                "is a bank, not an export", where=str(path), do="name the exports alone"
+            )
+        yield Hdf5Container(file, str(path))
 
 
-def _opened(file: Any, path: Path) -> PlainExport:
-    if file.attrs.get("format") == BANK_FORMAT:
-        raise SourceError("is a bank, not an export", where=str(path), do="name the exports alone")
-    about = {name: file.attrs[name] for name in DESCRIPTIONS if name in file.attrs}
-    datasets = {name: checked_dataset(file, name, path) for name in matrices_among(file)}
-    if "ids" in file:
-        about["ids"] = checked_dataset(file, "ids", path)[()]
-    columns, units = {}, {}
-    if "points" in file:
-        refuse_foreign_link(file, "points", path)
-        group = file["points"]
-        for name in group:
-            dataset = checked_dataset(group, name, path)
-            columns[name] = dataset[()]
-            units[name] = _text(dataset.attrs.get("units", ""))
-    shapes = {name: dataset.shape for name, dataset in datasets.items()}
+@dataclass(frozen=True, eq=False)
+class Hdf5Container:
+    """An open HDF5 file as a container of arrays."""
 
-    def read(name: str, start: int, stop: int) -> Any:
-        dataset = datasets[name]
-        with damage_reported(path):
-            return dataset[()] if dataset.ndim == 2 else dataset[start:stop]
+    file: Any
+    where: str
 
-    return PlainExport(path, shapes, read, columns, units, about)
+    def __contains__(self, name: str) -> bool:
+        import h5py
+
+        with damage_reported(self.where):
+            for path in _ancestors(name):
+                refuse_foreign_link(self.file, path, self.where)
+            return isinstance(self.file.get(name), h5py.Dataset)
+
+    def array(self, name: str) -> "Hdf5Array":
+        """Return a dataset, checked."""
+        with damage_reported(f"{self.where}, {name}"):
+            for path in _ancestors(name):
+                refuse_foreign_link(self.file, path, self.where)
+            return checked_dataset(self.file, name, self.where)
+
+    def under(self, prefix: str) -> list[str]:
+        """Names of the links in a group; "" lists the top."""
+        group = prefix.rstrip("/")
+        with damage_reported(self.where):
+            if not group:
+                return list(self.file)[:MOST_NAMES]
+            if self.file.get(group, getlink=True) is None:
+                return []
+            refuse_foreign_link(self.file, group, self.where)
+            return [f"{prefix}{name}" for name in self.file[group]]
+
+    def groups(self, depth: int) -> list[str]:
+        """Names of the groups that lie at a depth, 0 for those at the top."""
+        import h5py
+
+        names = [""]
+        with damage_reported(self.where):
+            for _ in range(depth + 1):
+                below = []
+                for base in names:
+                    for name in self.file[base] if base else self.file:
+                        path = f"{base}/{name}" if base else name
+                        refuse_foreign_link(self.file, path, self.where)
+                        if self.file.get(path, getclass=True) is h5py.Group:
+                            below.append(path)
+                names = below
+                if len(names) > MOST_POINTS:
+                    raise SourceError(f"holds {len(names)} groups", where=self.where)
+        return names
+
+    def attribute(self, path: str, name: str) -> Any:
+        """Value of an attribute of a group or dataset, or None."""
+        with damage_reported(f"{self.where}, {path}@{name}"):
+            for part in _ancestors(path):
+                refuse_foreign_link(self.file, part, self.where)
+            owner = self.file.get(path) if path else self.file
+            return None if owner is None else owner.attrs.get(name)
+
+    def unit(self, name: str) -> str:
+        """Text of the attribute ``units`` (or ``unit``) of a dataset."""
+        for key in ("units", "unit"):
+            value = self.attribute(name, key)
+            if value is not None:
+                return _text(value)
+        return ""
+
+
+def _ancestors(name: str) -> list[str]:
+    parts = [part for part in name.split("/") if part]
+    return ["/".join(parts[: count + 1]) for count in range(len(parts))]
 
 
 def _text(value: Any) -> str:
     if isinstance(value, np.ndarray):
         value = value.reshape(-1)[0] if value.size else ""
-    return value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value)
+    text = value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value)
+    return text[:200].encode("utf-8", "replace").decode("utf-8")
 
 
-def checked_dataset(group: Any, name: str, path: Path) -> Any:
+@dataclass(frozen=True, eq=False)
+class Hdf5Array:
+    """A dataset that has been checked."""
+
+    dataset: Any
+    where: str
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Its shape."""
+        return tuple(self.dataset.shape)
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Its type."""
+        dtype: np.dtype[Any] = self.dataset.dtype
+        return dtype
+
+    def block(self, axis: int) -> int:
+        """How many points a stored block holds."""
+        chunks = self.dataset.chunks
+        return 1 if chunks is None else int(chunks[axis])
+
+    def read(self, axis: int, start: int, stop: int) -> NDArray[Any]:
+        """Read a range of an axis, and all of the others."""
+        with damage_reported(self.where):
+            found: NDArray[Any] = self.dataset[(slice(None),) * axis + (slice(start, stop),)]
+            return found
+
+    def whole(self) -> NDArray[Any]:
+        """Read all of it."""
+        if self.dataset.size * self.dataset.dtype.itemsize > 2 * WHOLE_BYTES:
+            raise SourceError(f"holds {self.dataset.size} values", where=self.where)
+        with damage_reported(self.where):
+            return np.asarray(self.dataset[()])
+
+
+def checked_dataset(group: Any, name: str, path: str) -> Hdf5Array:
     """Return a dataset of a group whose values all lie in the file itself.
 
     Parameters
@@ -83,12 +179,12 @@ def checked_dataset(group: Any, name: str, path: Path) -> Any:
         Where to look.
     name : str
         Name of the link in the group.
-    path : Path
+    path : str
         The file, for messages.
 
     Returns
     -------
-    h5py.Dataset
+    Hdf5Array
 
     Raises
     ------
@@ -106,16 +202,30 @@ def checked_dataset(group: Any, name: str, path: Path) -> Any:
         raise SourceError("takes its values from other files", where=where, do="copy them in")
     if dataset.shape is None:
         raise SourceError("is empty", where=where)
-    if _stored_whole(dataset):
-        return dataset
-    raise SourceError(
-        f"claims {dataset.size} values of which the file holds only a part",
-        where=where,
-        do="write all values out, zeros too",
-    )
+    check_blocks(dataset, where)
+    if not stored_whole(dataset):
+        raise SourceError(
+            f"claims {dataset.size} values of which the file holds only a part",
+            where=where,
+            do="write all values out, zeros too",
+        )
+    return Hdf5Array(dataset, where)
 
 
-def _stored_whole(dataset: Any) -> bool:
+def check_blocks(dataset: Any, where: str) -> None:
+    """Refuse a dataset whose compressed blocks are too large to unpack one by one."""
+    chunks = dataset.chunks
+    if chunks is None:
+        return
+    size = int(np.prod([int(c) for c in chunks], dtype=object)) * dataset.dtype.itemsize
+    if size > WHOLE_BYTES:
+        raise SourceError(
+            f"is stored in blocks of {size} bytes", where=where, do="store it in smaller chunks"
+        )
+
+
+def stored_whole(dataset: Any) -> bool:
+    """Whether the file holds as many values as the shape of a dataset claims."""
     if dataset.size == 0:
         return True
     if dataset.chunks is None:
@@ -124,7 +234,7 @@ def _stored_whole(dataset: Any) -> bool:
     return bool(dataset.id.get_num_chunks() >= int(np.prod([int(c) for c in counts], dtype=object)))
 
 
-def refuse_foreign_link(group: Any, name: str, path: Path) -> None:
+def refuse_foreign_link(group: Any, name: str, path: str) -> None:
     """Raise SourceError when a link leads out of the file."""
     import h5py
 

@@ -6,8 +6,8 @@ from numpy.typing import NDArray
 from ssaudit.modes.poles import isolate
 
 Array = NDArray[np.float64]
-# I - σKD counts as singular when its reciprocal condition number is below this many units of
-# roundoff a row: the closed loop would have no correct digit.
+# I - σKD counts as singular when its reciprocal condition number, in the best of units, is below
+# this many units of roundoff a row: the closed loop would have no correct digit.
 SINGULAR_ROUNDOFFS = 4.0
 
 
@@ -79,7 +79,7 @@ def close_output_feedback(
     if not np.any(D):
         return close_state_feedback(A, B, np.matmul(K, C), sign), np.zeros(len(A), dtype=bool)
     loop = np.eye(B.shape[2]) - sign * np.matmul(K, D)
-    ill_posed = _singular(loop)
+    ill_posed = _singular(loop, np.eye(B.shape[2]) + np.abs(K) @ np.abs(D))
     commanded = np.broadcast_to(np.matmul(K, C), (len(A), B.shape[2], A.shape[2]))
     safe = np.where(ill_posed[:, np.newaxis, np.newaxis], np.eye(B.shape[2]), loop)
     (effective,), failed = isolate(lambda m, r: (np.linalg.solve(m, r),), safe, commanded)
@@ -88,9 +88,16 @@ def close_output_feedback(
     return close_state_feedback(A, B, effective, sign), ill_posed
 
 
-def _singular(loop: Array) -> NDArray[np.bool_]:
-    """Where a stack of small matrices is singular to working precision, whatever their scale."""
-    values = np.linalg.svd(loop, compute_uv=False)
-    smallest, largest = values[:, -1], np.maximum(values[:, 0], 1.0)
+def _singular(loop: Array, size: Array) -> NDArray[np.bool_]:
+    """Where a stack of I - σKD is singular to working precision, in whatever units.
+
+    The spectral radius of abs(inverse) size, with size = I + abs(K) abs(D) the magnitude of what was
+    added up, is the least condition number that any choice of units gives (Bauer, Optimally scaled
+    matrices, Numer. Math. 5, 1963; from memory).
+    """
+    (inverse,), failed = isolate(lambda stack: (np.linalg.inv(stack),), loop)
+    (values,), lost = isolate(
+        lambda stack: (np.abs(np.linalg.eigvals(stack)),), np.abs(inverse) @ size
+    )
     limit = SINGULAR_ROUNDOFFS * loop.shape[-1] * np.finfo(float).eps
-    return np.asarray(~(smallest > limit * largest))
+    return np.asarray(failed | lost | ~(values.max(axis=1) * limit < 1.0))

@@ -1,6 +1,7 @@
 """Reading loops and gain tables from the files that engineers keep them in."""
 
 import csv
+import math
 import os
 from pathlib import Path
 from typing import Any
@@ -10,9 +11,20 @@ import numpy as np
 from ssaudit.errors import LoopError, SsauditError
 from ssaudit.loop.gains import ConstantGain, Gain, GainSchedule
 from ssaudit.loop.model import FEEDS, Loop
-from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
+from ssaudit.loop.uncertainty import read_uncertain
+from ssaudit.settings import (
+    check_keys,
+    is_finite_number,
+    nearest,
+    read_toml,
+    shown,
+    take,
+    take_words,
+)
 
 COLUMN = "K:"
+# Grids of so many cells are looked at for missing breakpoints, however few rows a table has.
+MOST_CELLS = 1_000_000
 
 
 def read_loop(path: str | os.PathLike[str]) -> Loop:
@@ -22,7 +34,8 @@ def read_loop(path: str | os.PathLike[str]) -> Loop:
     ----------
     path : path
         A TOML file: ``sign``, ``feed`` and ``[gain]`` with a ``matrix``, or with a ``table`` (a CSV
-        file, its path relative to the loop file), its ``variables``, and what happens ``outside``.
+        file, its path relative to the loop file), its ``variables``, and what happens ``outside``;
+        ``[[uncertain]]`` tables say how far entries may be off.
 
     Returns
     -------
@@ -35,7 +48,7 @@ def read_loop(path: str | os.PathLike[str]) -> Loop:
     """
     where = str(path)
     about = read_toml(path, LoopError)
-    check_keys(about, ("sign", "feed", "gain"), where=where, error=LoopError)
+    check_keys(about, ("sign", "feed", "gain", "uncertain"), where=where, error=LoopError)
     feed = take(about, "feed", str, where=where, error=LoopError, default="states")
     if feed not in FEEDS:
         raise LoopError(f"feed is {feed!r}", where=where, do=nearest(feed, FEEDS))
@@ -43,7 +56,29 @@ def read_loop(path: str | os.PathLike[str]) -> Loop:
     sign = take(about, "sign", str, where=where, error=LoopError, required=needs_gain, default="")
     table = take(about, "gain", dict, where=where, error=LoopError, required=needs_gain)
     gain = None if table is None else _read_gain(table, Path(path))
-    return Loop(sign, gain, feed, where)
+    tables = take(about, "uncertain", list, where=where, error=LoopError, default=[])
+    return Loop(sign, gain, feed, where, read_uncertain(tables, where))
+
+
+def files_of_loop(path: str | os.PathLike[str]) -> tuple[Path, ...]:
+    """Files that a loop is read from: the loop file, and the gain table that it names.
+
+    Parameters
+    ----------
+    path : path
+        A loop file that `read_loop` accepts.
+
+    Returns
+    -------
+    tuple of Path
+
+    Raises
+    ------
+    LoopError
+        When the file cannot be read.
+    """
+    table = read_toml(path, LoopError).get("gain", {}).get("table")
+    return (Path(path),) if table is None else (Path(path), Path(path).parent / table)
 
 
 def _read_gain(about: dict[str, Any], path: Path) -> Gain:
@@ -83,8 +118,8 @@ def _as_matrix(rows: Any) -> Any:
         raise LoopError("the rows of matrix differ in length")
     for row in rows:
         for value in row:
-            if isinstance(value, bool) or not isinstance(value, int | float):
-                raise LoopError(f"matrix holds {value!r}, not a number")
+            if not is_finite_number(value):
+                raise LoopError(f"matrix holds {shown(value)}, not a finite number")
     return rows
 
 
@@ -212,9 +247,14 @@ def _check_full_grid(
     variables: tuple[str, ...],
     where: str,
 ) -> None:
-    times = np.zeros(shape, dtype=int) if np.prod(shape, dtype=object) <= 10**8 else None
-    if times is None:
-        raise LoopError(f"spans a grid of {shape}, too large to be full", where=where)
+    size, rows = math.prod(shape), len(position[0])
+    if size > max(MOST_CELLS, rows):
+        raise LoopError(
+            f"its {rows} breakpoints cannot fill the grid that they span, of {size}",
+            where=where,
+            do="give every combination of the variables once",
+        )
+    times = np.zeros(shape, dtype=int)
     np.add.at(times, tuple(position), 1)
     for count, problem in ((0, "is missing"), (2, "stands twice")):
         cells = np.argwhere(times == 0 if count == 0 else times >= 2)

@@ -91,7 +91,12 @@ class ConstantGain:
     @property
     def description(self) -> dict[str, object]:
         """Content for digests and provenance."""
-        return {"inputs": self.inputs, "signals": self.signals, "matrix": self.matrix.tolist()}
+        return {
+            "inputs": self.inputs,
+            "signals": self.signals,
+            "matrix": self.matrix.tolist(),
+            "unnamed": self.unnamed,
+        }
 
 
 @dataclass(frozen=True, eq=False)
@@ -207,6 +212,7 @@ class GainSchedule:
             "signals": self.signals,
             "gains": self.gains.tolist(),
             "outside": self.outside,
+            "unnamed": self.unnamed,
         }
 
 

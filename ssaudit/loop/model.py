@@ -11,6 +11,7 @@ from ssaudit.bank import Matrices, ModelBank, Points, Section
 from ssaudit.errors import LoopError
 from ssaudit.loop.closing import close_output_feedback, close_state_feedback
 from ssaudit.loop.gains import Gain
+from ssaudit.loop.uncertainty import Uncertain, misfit_of, stated_errors
 from ssaudit.settings import nearest
 
 SIGNS = {"negative": -1, "positive": 1}
@@ -54,6 +55,8 @@ class Loop:
         What is fed back: "states", "outputs", or "none" for models that come closed.
     name : str
         File name, for messages.
+    uncertain : tuple of Uncertain
+        How far entries of the matrices or gains may be off.
 
     Raises
     ------
@@ -74,6 +77,7 @@ class Loop:
     gain: Gain | None = None
     feed: str = "states"
     name: str = "loop"
+    uncertain: tuple[Uncertain, ...] = ()
 
     def __post_init__(self) -> None:
         if self.feed not in FEEDS:
@@ -98,6 +102,7 @@ class Loop:
             "sign": self.sign,
             "feed": self.feed,
             "gain": self.gain.description if self.gain else None,
+            "uncertain": [statement.description for statement in self.uncertain],
         }
 
     @property
@@ -162,6 +167,10 @@ class Loop:
         missing = [name for name in NEEDED[self.feed] if name not in section.matrices]
         if missing:
             return f"{missing[0]} is missing, and feed = {self.feed!r} needs it"
+        for statement in self.uncertain:
+            misfit = misfit_of(statement, section, self._signals(section))
+            if misfit:
+                return misfit
         if self.gain is None:
             return ""
         for kind, named, valid, size in (
@@ -186,6 +195,28 @@ class Loop:
                     f'{", ".join(valid)}, or set unnamed = "zero" in [gain]'
                 )
         return ""
+
+    def errors(
+        self, section: Section, matrices: Matrices, K: NDArray[np.float64] | None
+    ) -> dict[str, NDArray[np.float64]]:
+        """How far the entries of matrices and gains may be off, as the user states it.
+
+        Parameters
+        ----------
+        section : Section
+            Names of the section.
+        matrices : dict of (points, rows, columns) float
+            The matrices.
+        K : (points or 1, inputs, signals) float or None
+            The gains in the section's order.
+
+        Returns
+        -------
+        dict of (points, rows, columns) float
+            By matrix; empty when nothing is stated.
+        """
+        with_gains = dict(matrices) if K is None else {**matrices, "K": K}
+        return stated_errors(self.uncertain, section, self._signals(section), with_gains)
 
     def check(self, bank: ModelBank) -> None:
         """Check that the loop fits a bank as a whole.

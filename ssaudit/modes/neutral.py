@@ -10,8 +10,9 @@ def neutral_states(
     """Find which of the named states nothing depends on.
 
     Such a state only sums up the others: its column is exactly zero (of A - I, when sampled), and
-    leaving out its row and column leaves all other poles what they are. A named state that
-    something does depend on, because the loop feeds it back, is not neutral and stays.
+    leaving out its row and column leaves all other poles what they are. A named state on which
+    only neutral states depend is neutral too, as is the heading that a position sums up. A named
+    state that something else does depend on, because the loop feeds it back, stays.
 
     Parameters
     ----------
@@ -34,9 +35,16 @@ def neutral_states(
     array([[False,  True]])
     """
     found = np.zeros(A.shape[:2], dtype=bool)
-    if len(named):
-        columns = A[:, :, named]
-        if sampled:
-            columns = columns - np.eye(A.shape[1])[:, named]
-        found[:, named] = ~columns.any(axis=1)
+    if not len(named):
+        return found
+    columns = A[:, :, named]
+    if sampled:
+        columns = columns - np.eye(A.shape[1])[:, named]
+    depends = columns != 0
+    # Each round finds at least one more state of a chain, or ends.
+    for _ in named:
+        free = ~(depends & ~found[:, :, np.newaxis]).any(axis=1)
+        if np.array_equal(free, found[:, named]):
+            break
+        found[:, named] = free
     return found

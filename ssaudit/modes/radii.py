@@ -53,10 +53,11 @@ def rounding_error(M: ArrayLike, digits: int) -> Floats:
         raise ValueError(f"digits is {digits}, expected at least 1")
     size = np.abs(np.asarray(M, dtype=float))
     with np.errstate(divide="ignore"):
-        # The small addition keeps an exact power of ten in its own decade.
+        # The small addition keeps an exact power of ten in its own decade; that of 0 is -inf, and
+        # ten to that power is 0.
         decade = np.floor(np.log10(size) + 1e-12)
-    half_unit = 0.5 * 10.0 ** np.where(size > 0, decade - (digits - 1), 0.0)
-    return np.where(size > 0, half_unit + 0.5 * EPS * size, 0.0)
+    error: Floats = 0.5 * 10.0 ** (decade - (digits - 1)) + 0.5 * EPS * size
+    return error
 
 
 def closed_loop_entry_error(

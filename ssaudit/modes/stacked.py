@@ -32,6 +32,10 @@ class Modes:
         vectors were not computed.
     share : (points, n, top) float or None
         Their participation.
+    infinite : (points,) int or None
+        Infinite poles of descriptor models, which ``s`` leaves out; None for ordinary models.
+    unsolved : (points,) object or None
+        Why a model has no modes, as str; "" where it has. None: all have.
     """
 
     s: NDArray[np.complex128]
@@ -39,6 +43,11 @@ class Modes:
     z: NDArray[np.complex128] | None = None
     index: NDArray[np.int64] | None = None
     share: Floats | None = None
+    infinite: NDArray[np.int64] | None = None
+    unsolved: NDArray[np.object_] | None = None
+
+
+NOT_CONVERGED = "the eigenvalue iteration did not converge"
 
 
 def find_usable_modes(
@@ -46,6 +55,8 @@ def find_usable_modes(
     usable: NDArray[np.bool_],
     entry_error: Floats | None,
     *,
+    E: Floats | None = None,
+    mass_error: Floats | None = None,
     dt: float = 0.0,
     neutral: Sequence[int] = (),
     vectors: bool = True,
@@ -60,10 +71,14 @@ def find_usable_modes(
         Points to look at; the others get NaN.
     entry_error : (points, n, n) float or None
         How far each entry of A may be off; None: A is exact.
+    E : (points, n, n) float, optional
+        Left-hand matrices of descriptor models E x' = A x.
+    mass_error : (points, n, n) float, optional
+        How far each entry of E may be off.
     dt : float
         Sampling time [s]; 0 for continuous models.
     neutral : sequence of int
-        States whose poles are left out where nothing depends on them.
+        States whose poles are left out where nothing depends on them; descriptor models keep them.
     vectors : bool
         Whether to compute vectors, participation, and radii from them. Otherwise the radius is
         only what even a perfectly conditioned pole would have.
@@ -72,7 +87,7 @@ def find_usable_modes(
     -------
     modes : Modes
     failed : (points,) bool
-        Where the eigenvalue iteration did not converge.
+        Where there are no modes; ``modes.unsolved`` says why.
 
     Examples
     --------
@@ -82,38 +97,115 @@ def find_usable_modes(
     (array([[0.+2.j, 0.-2.j]]), array([ 0,  1, -1]))
     """
     count, n = A.shape[:2]
-    poles = np.full((count, n), np.nan, dtype=np.complex128)
-    radius = np.full((count, n), np.nan)
-    index = np.full((count, n, TOP), -1, dtype=np.int64) if vectors else None
-    share = np.full((count, n, TOP), np.nan) if vectors else None
-    failed = np.zeros(count, dtype=bool)
-    left_out = neutral_states(A, np.array(neutral, dtype=np.int64), dt > 0)
-    for rows, kept in _alike(left_out, usable):
-        k, whole = len(kept), len(rows) == count and len(kept) == n
-        part = A if whole else A[rows][:, kept][:, :, kept]
-        if index is None or share is None:
-            poles[rows, :k], failed[rows] = find_poles(part)
-            largest = np.abs(part).max(axis=(1, 2), initial=0.0)
-            radius[rows, :k] = np.finfo(float).eps * largest[:, np.newaxis]
-            continue
-        found, right, left, failed[rows] = find_modes(part)
-        poles[rows, :k] = found
-        error = None if entry_error is None else entry_error[rows][:, kept][:, :, kept]
-        distance = np.abs(1 - np.abs(found)) if dt > 0 else None
-        radius[rows, :k] = pole_radii(
-            part, found, right, left, entry_error=error, distance=distance
+    found = _Found.nothing(count, n, vectors)
+    if E is not None:
+        _find_descriptor(found, A, E, usable, entry_error, mass_error)
+    else:
+        left_out = neutral_states(A, np.array(neutral, dtype=np.int64), dt > 0)
+        for rows, kept in _alike(left_out, usable):
+            _find_alike(found, A, rows, kept, entry_error, dt)
+    failed = found.unsolved != ""
+    poles, radius = found.poles, found.radius
+    rest = (found.index, found.share, found.infinite if E is not None else None, found.unsolved)
+    if dt > 0:
+        s, off = continuous_poles(poles, dt), continuous_radius(poles, radius, dt)
+        return Modes(s, off, poles, *rest), failed
+    return Modes(poles, radius, None, *rest), failed
+
+
+@dataclass(frozen=True, eq=False)
+class _Found:
+    """Arrays that are filled kind by kind of points."""
+
+    poles: NDArray[np.complex128]
+    radius: Floats
+    index: NDArray[np.int64] | None
+    share: Floats | None
+    infinite: NDArray[np.int64]
+    unsolved: NDArray[np.object_]
+
+    @classmethod
+    def nothing(cls, count: int, n: int, vectors: bool) -> "_Found":
+        return cls(
+            np.full((count, n), np.nan, dtype=np.complex128),
+            np.full((count, n), np.nan),
+            np.full((count, n, TOP), -1, dtype=np.int64) if vectors else None,
+            np.full((count, n, TOP), np.nan) if vectors else None,
+            np.zeros(count, dtype=np.int64),
+            np.full(count, "", dtype=object),
         )
+
+    def add_participation(
+        self,
+        rows: NDArray[np.int64],
+        kept: NDArray[np.int64],
+        poles: NDArray[np.complex128],
+        right: NDArray[np.complex128],
+        left: NDArray[np.complex128],
+    ) -> None:
+        """Enter which states take part most in the modes of some points."""
+        if self.index is None or self.share is None:
+            return
         # Both modes of a conjugate pair have the same participation; the first one is enough.
-        first = found.imag >= 0
+        first = poles.imag >= 0
         factors = participation_of_modes(np.swapaxes(right, 1, 2)[first], left[first])
         top, shares = top_states(factors)
         point, mode = np.nonzero(first)
-        index[rows[point], mode] = np.where(top >= 0, kept[top], -1)
-        share[rows[point], mode] = shares
-    if dt > 0:
-        s, off = continuous_poles(poles, dt), continuous_radius(poles, radius, dt)
-        return Modes(s, off, poles, index, share), failed
-    return Modes(poles, radius, None, index, share), failed
+        self.index[rows[point], mode] = np.where(top >= 0, kept[top], -1)
+        self.share[rows[point], mode] = shares
+
+
+def _find_alike(
+    found: _Found,
+    A: Floats,
+    rows: NDArray[np.int64],
+    kept: NDArray[np.int64],
+    entry_error: Floats | None,
+    dt: float,
+) -> None:
+    """Enter the modes of ordinary models that keep the same states."""
+    k, whole = len(kept), len(rows) == len(A) and len(kept) == A.shape[1]
+    part = A if whole else A[rows][:, kept][:, :, kept]
+    if found.index is None:
+        found.poles[rows, :k], failed = find_poles(part)
+        largest = np.abs(part).max(axis=(1, 2), initial=0.0)
+        found.radius[rows, :k] = np.finfo(float).eps * largest[:, np.newaxis]
+    else:
+        poles, right, left, failed = find_modes(part)
+        found.poles[rows, :k] = poles
+        error = None if entry_error is None else entry_error[rows][:, kept][:, :, kept]
+        distance = np.abs(1 - np.abs(poles)) if dt > 0 else None
+        found.radius[rows, :k] = pole_radii(
+            part, poles, right, left, entry_error=error, distance=distance
+        )
+        found.add_participation(rows, kept, poles, right, left)
+    found.unsolved[rows[failed]] = NOT_CONVERGED
+
+
+def _find_descriptor(
+    found: _Found,
+    A: Floats,
+    E: Floats,
+    usable: NDArray[np.bool_],
+    entry_error: Floats | None,
+    mass_error: Floats | None,
+) -> None:
+    """Enter the modes of descriptor models."""
+    from ssaudit.modes.descriptor import REASONS, descriptor_modes
+
+    rows = np.flatnonzero(usable)
+    if not len(rows):
+        return
+    modes = descriptor_modes(
+        A[rows],
+        E[rows],
+        entry_error=None if entry_error is None else entry_error[rows],
+        mass_error=None if mass_error is None else mass_error[rows],
+    )
+    found.poles[rows], found.radius[rows] = modes.poles, modes.radii
+    found.infinite[rows] = modes.infinite
+    found.unsolved[rows] = [REASONS.get(str(reason), "") for reason in modes.reason]
+    found.add_participation(rows, np.arange(A.shape[1]), modes.poles, modes.right, modes.left)
 
 
 def _alike(

@@ -20,9 +20,7 @@ from ssaudit.report.words import (
 from ssaudit.stages import AuditReport
 from ssaudit.summary import Summary
 
-# Coordinates that have a column of their own; more would not fit 80 columns.
-MOST_COORDINATES = 3
-MOST_REQUIREMENTS = 5
+MOST_REQUIREMENTS = 4
 MOST_REASONS = 2
 LONGEST_ID = 24
 
@@ -42,7 +40,8 @@ def audit_text(report: AuditReport) -> RenderableType:
     """
     summary, units = report.summary, report.about["units"]
     title = f"Audit of revision {summary.revision}: {summary.total} points"
-    parts: list[RenderableType] = [one_line(title, "bold"), counts(summary.counts), Text()]
+    parts: list[RenderableType] = [one_line(title, "bold"), counts(summary.counts)]
+    parts += [*_proofs(summary), Text()]
     if summary.worst:
         parts += [*_worst(summary, units), Text()]
     parts += [*_missed(summary, units), *_void(summary), Text()]
@@ -50,18 +49,30 @@ def audit_text(report: AuditReport) -> RenderableType:
     return Group(*parts)
 
 
+def _proofs(summary: Summary) -> list[Text]:
+    lines = []
+    if summary.proofs:
+        named = {"stable": "proved stable", "unstable": "proved unstable", "open": "open"}
+        found = [f"{summary.proofs.get(key, 0)} {words}" for key, words in named.items()]
+        lines.append(one_line("proofs: " + "   ".join(found)))
+    if summary.tolerated:
+        lines.append(one_line(f"{summary.tolerated} in doubt about a requirement, let pass as ok"))
+    return lines
+
+
 def _worst(summary: Summary, units: Mapping[str, str]) -> list[Text]:
     """Two lines a point: the numbers; then what is wrong and which states take part most."""
-    names = [n[3:] for n in summary.worst[0] if n.startswith("at_")][:MOST_COORDINATES]
+    # Coordinates stand last, so that the screen's edge cuts off the last of many of them.
+    names = [n[3:] for n in summary.worst[0] if n.startswith("at_")]
     headings = [f"{name} {units.get(name, '')}".rstrip() for name in names]
-    headings = ["worst points", "", *headings, "worst pole 1/s", "ζ"]
+    headings = ["worst points", "", "worst pole 1/s", "ζ", *headings]
     rows: list[list[str | Text]] = [
         [
             shortened(point["point"]),
             verdict(point["verdict"]),
-            *(f"{point['at_' + name]:g}" for name in names),
             pole(point["real"], point["imag"]),
             number(point["damping_ratio"], 3),
+            *(f"{point['at_' + name]:g}" for name in names),
         ]
         for point in summary.worst
     ]
@@ -71,8 +82,11 @@ def _worst(summary: Summary, units: Mapping[str, str]) -> list[Text]:
 
 
 def shortened(point: str) -> str:
-    """Name of a point, cut to what a table has room for."""
-    return point if len(point) <= LONGEST_ID else f"{point[: LONGEST_ID - 1]}…"
+    """Name of a point, what a table has no room for left out of its middle."""
+    if len(point) <= LONGEST_ID:
+        return point
+    kept = (LONGEST_ID - 1) // 2
+    return f"{point[: LONGEST_ID - 1 - kept]}…{point[-kept:]}"
 
 
 def _why(point: Mapping[str, Any]) -> str:
@@ -99,8 +113,11 @@ def participating(point: Mapping[str, Any]) -> dict[str, float]:
 
 
 def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
-    """A line a requirement, and another that says where, if it is missed anywhere."""
-    shown = summary.missed[:MOST_REQUIREMENTS]
+    """Give each requirement a line, and another that says where, if it is missed anywhere."""
+    # Stability and, of too many, those that are missed at most points, in the order of the file.
+    stability, *asked = summary.missed
+    most = sorted(asked, key=lambda missed: -missed.points)[: MOST_REQUIREMENTS - 1]
+    shown = [stability, *(missed for missed in asked if missed in most)]
     rows: list[list[str | Text]] = [
         [
             Text(str(missed.points), style="" if missed.points else "dim"),
@@ -115,8 +132,8 @@ def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
         table.append(line)
         if missed.points:
             table.append(one_line(f"    {_within(missed.between, summary.between, units)}", "dim"))
-    more = len(summary.missed) - MOST_REQUIREMENTS
-    return [*table, one_line(f"and {more} more requirements: --json")] if more > 0 else table
+    more = len(summary.missed) - len(shown)
+    return [*table, one_line(f"and {more} more requirements: --json")] if more else table
 
 
 def _within(

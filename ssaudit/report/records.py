@@ -24,8 +24,8 @@ NUMBERS = (
 
 
 def as_json(record: Mapping[str, Any]) -> str:
-    """Write a record as JSON; there is no NaN and no infinity in it."""
-    return json.dumps(record, indent=1, allow_nan=False, ensure_ascii=False)
+    """Write a record as JSON: no NaN, no infinity, and ASCII alone, which any encoding can hold."""
+    return json.dumps(record, indent=1, allow_nan=False)
 
 
 def audit_record(report: AuditReport) -> dict[str, Any]:
@@ -63,6 +63,8 @@ def audit_record(report: AuditReport) -> dict[str, Any]:
         ],
         "void": summary.void,
         "held": summary.held,
+        "tolerated": summary.tolerated,
+        "proofs": summary.proofs,
         "max_real": finite(summary.max_real),
         "min_damping": finite(summary.min_damping),
         "units": report.about["units"],
@@ -81,10 +83,18 @@ def _point(point: Mapping[str, Any]) -> dict[str, Any]:
         "tags": {n.removeprefix("tag_"): v for n, v in point.items() if n[:4] == "tag_"},
         "verdict": point["verdict"],
         "reason": point["reason"],
+        "doubt": point["doubt"] or None,
+        "proof": point.get("proof") or None,
+        "stable_inside": _answer(point["stable_inside"]),
+        "stable_outside": _answer(point["stable_outside"]),
         "missed": [name for name in point["missed"].split("; ") if name],
         **{name: finite(point[name]) for name in NUMBERS if name in point},
         "top_states": participating(point),
     }
+
+
+def _answer(value: int) -> bool | None:
+    return None if value < 0 else bool(value)
 
 
 def drift_record(before: LoggedRun, after: LoggedRun, drift: Drift, movers: int) -> dict[str, Any]:

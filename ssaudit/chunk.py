@@ -1,0 +1,303 @@
+"""One chunk of an audit: close, find the modes, judge, settle, prove; then the columns."""
+
+from collections.abc import Container, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ssaudit.bank import Matrices, Points, Section
+from ssaudit.columns import Columns, mode_columns, point_columns
+from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
+from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
+from ssaudit.loop.model import SIGNS, ClosedModels, Loop
+from ssaudit.modes.hidden import NO, UNKNOWN, YES
+from ssaudit.modes.neutral import neutral_states
+from ssaudit.modes.radii import closed_loop_entry_error, rounding_error
+from ssaudit.modes.stacked import find_usable_modes
+from ssaudit.outside import seen_from_outside
+from ssaudit.settling import apply_proofs, settle
+
+Floats = NDArray[np.float64]
+DEPTHS = ("poles", "modes")
+PROVE = ("doubt", "worst", "all")
+
+
+@dataclass(frozen=True, eq=False)
+class Settings:
+    """What every chunk of an audit is audited by.
+
+    Attributes
+    ----------
+    loop : Loop
+        How the models are closed.
+    criteria : Criteria
+        What they are judged by.
+    depth : str
+        "poles" or "modes".
+    prove : str or container of int
+        Which points to prove: "" none, "doubt" those in doubt, "all", or places in the bank.
+    """
+
+    loop: Loop
+    criteria: Criteria
+    depth: str = "modes"
+    prove: str | Container[int] = ""
+
+
+@dataclass(frozen=True, eq=False)
+class Part:
+    """Audited points of one chunk, column by column.
+
+    Attributes
+    ----------
+    points : dict of (points,) arrays
+        A row a point; columns as in the ledger.
+    modes : dict of (modes,) arrays
+        A row a mode, conjugate pairs once; ``row`` is the point's row in ``points``.
+    values, shortfall : (points, requirements) float
+        Worst value of each requirement's quantity, and how far it is beyond the limit.
+    missed : (points, requirements) bool
+        Which requirements are missed.
+    """
+
+    points: Columns
+    modes: Columns
+    values: Floats
+    shortfall: Floats
+    missed: NDArray[np.bool_]
+
+
+def audit_chunk(
+    revision: str,
+    section: Section,
+    points: Points,
+    matrices: Matrices,
+    settings: Settings,
+    offset: int = 0,
+) -> Part:
+    """Audit some points of one section.
+
+    Parameters
+    ----------
+    revision : str
+        Name of the model revision.
+    section : Section
+        Names and sampling time.
+    points : Points
+        The points.
+    matrices : dict of (points, rows, columns) float
+        Their matrices.
+    settings : Settings
+        What to audit by.
+    offset : int
+        Place of the first of them in the bank.
+
+    Returns
+    -------
+    Part
+    """
+    closed = settings.loop.close(section, points, matrices)
+    chunk = _Chunk(section, matrices, closed, settings)
+    deep = settings.depth != "poles"
+    everywhere = np.arange(len(points))
+    E = matrices.get("E")
+    modes, failed = find_usable_modes(
+        closed.A,
+        closed.void == "",
+        chunk.entry_error(everywhere) if deep else None,
+        E=E,
+        mass_error=None if E is None else chunk.mass_error(E),
+        dt=section.dt,
+        neutral=chunk.neutral,
+        vectors=deep,
+    )
+    if modes.unsolved is not None:
+        unsolved = failed & (closed.void == "")
+        closed.void[unsolved] = modes.unsolved[unsolved]
+    judgement = judge(modes, points, closed.void, settings.criteria)
+    if E is None:
+        judgement = settle(judgement, modes, closed.A, chunk.entry_error, neutral=chunk.neutral)
+    outcomes = chunk.prove(_rows_to_prove(settings.prove, judgement, offset))
+    judgement = apply_proofs(judgement, outcomes)
+    columns = point_columns(revision, section, points, closed, modes, judgement, settings.criteria)
+    columns |= chunk.both_answers(judgement, deep)
+    if settings.prove:
+        columns["proof"] = np.full(len(points), "", dtype=object)
+        for row, (outcome, _) in outcomes.items():
+            columns["proof"][row] = outcome
+    return Part(
+        columns,
+        mode_columns(section, closed, modes),
+        judgement.value,
+        judgement.shortfall,
+        judgement.missed,
+    )
+
+
+def _rows_to_prove(
+    prove: str | Container[int], judgement: Judgement, offset: int
+) -> NDArray[np.int64]:
+    judged = judgement.verdict != VOID
+    if prove == "all":
+        return np.flatnonzero(judged)
+    if prove == "doubt":
+        return np.flatnonzero(judgement.verdict == DOUBT)
+    if not prove or isinstance(prove, str):
+        return np.zeros(0, dtype=np.int64)
+    chosen = [row for row in np.flatnonzero(judged) if int(row) + offset in prove]
+    return np.array(chosen, dtype=np.int64)
+
+
+@dataclass(frozen=True, eq=False)
+class _Chunk:
+    """What is asked again about some rows of a chunk: errors, proofs, behaviour from outside."""
+
+    section: Section
+    matrices: Matrices
+    closed: ClosedModels
+    settings: Settings
+
+    @property
+    def neutral(self) -> list[int]:
+        """States that the criteria exempt, by number."""
+        named = self.settings.criteria.neutral
+        return [i for i, name in enumerate(self.section.states) if name in named]
+
+    @property
+    def feed(self) -> Any:
+        return "states" if self.settings.loop.feed == "states" else "outputs"
+
+    @property
+    def sign(self) -> int:
+        return SIGNS.get(self.settings.loop.sign, -1)
+
+    def parts(self, rows: NDArray[np.int64]) -> dict[str, Floats]:
+        """Matrices and gains of some rows; D only where the loop feeds outputs back."""
+        loop = self.settings.loop
+        K = self.closed.K
+        needed = {"none": "A", "states": "AB", "outputs": "ABCD"}[loop.feed]
+        parts = {name: self.matrices[name][rows] for name in needed}
+        if K is not None:
+            parts["K"] = np.broadcast_to(K, (len(self.closed.A), *K.shape[1:]))[rows]
+        return parts
+
+    def errors(self, parts: Mapping[str, Floats]) -> dict[str, Floats]:
+        """How far these may be off, as the user states it."""
+        plain = {name: M for name, M in parts.items() if name != "K"}
+        return self.settings.loop.errors(self.section, plain, parts.get("K"))
+
+    def mass_error(self, E: Floats) -> Floats:
+        """How far the entries of E may be off."""
+        stated = self.settings.loop.errors(self.section, {"E": E}, None).get("E")
+        error = np.zeros(E.shape) if stated is None else stated
+        if self.section.digits is not None:
+            error = error + rounding_error(E, self.section.digits)
+        return error
+
+    def entry_error(self, rows: NDArray[np.int64]) -> Floats | None:
+        """How far the closed matrices may be off, by rounding of export and closing, and as stated.
+
+        Returns
+        -------
+        (rows, n, n) float or None
+            None: not at all.
+        """
+        parts = self.parts(rows)
+        errors = self.errors(parts)
+        digits = self.section.digits
+        # Void points may hold NaN or infinity; what comes of them is not used.
+        with np.errstate(all="ignore"):
+            if "K" not in parts:
+                if digits is None and not errors:
+                    return None
+                rounding = 0.0 if digits is None else rounding_error(parts["A"], digits)
+                return np.asarray(rounding + errors.get("A", 0.0))
+            return closed_loop_entry_error(
+                parts["A"],
+                parts["B"],
+                parts.get("C"),
+                parts.get("D"),
+                parts["K"],
+                sign=self.sign,
+                feed=self.feed,
+                digits=digits,
+                errors=errors,
+            )
+
+    def prove(self, rows: NDArray[np.int64]) -> dict[int, tuple[str, str]]:
+        """Prove rows in exact or ball arithmetic, their neutral states left out."""
+        if not len(rows):
+            return {}
+        from ssaudit.modes.proof import prove_points
+
+        outcomes: dict[int, tuple[str, str]] = {}
+        named = np.array(self.neutral, dtype=np.int64)
+        E = self.matrices.get("E")
+        for row in rows:
+            one = np.array([row])
+            parts = self.parts(one)
+            errors = self.errors(parts)
+            if E is not None:
+                parts["E"] = E[one]
+                errors["E"] = self.mass_error(E[one])
+            kept = ~neutral_states(self.closed.A[one], named, self.section.dt > 0)[0]
+            if E is None and not kept.all():
+                parts, errors = (_without(group, kept, self.feed) for group in (parts, errors))
+            proof = prove_points(
+                [0],
+                parts["A"],
+                parts.get("B"),
+                parts.get("C"),
+                parts.get("D"),
+                parts.get("K"),
+                E=parts.get("E"),
+                sign=self.sign,
+                feed=self.feed,
+                dt=self.section.dt,
+                digits=self.section.digits,
+                errors=errors,
+            )[0]
+            outcomes[int(row)] = (proof.outcome, proof.how)
+        return outcomes
+
+    def both_answers(self, judgement: Judgement, deep: bool) -> Columns:
+        """Whether each point is stable inside, and whether it seems so from outside."""
+        inside = np.full(len(judgement.verdict), YES, dtype=np.int8)
+        inside[judgement.verdict == LOST] = NO
+        unsure = (judgement.verdict == VOID) | (judgement.verdict == DOUBT)
+        inside[unsure & ~_only_short(judgement)] = UNKNOWN
+        outside = inside.copy()
+        lost = np.flatnonzero(judgement.verdict == LOST)
+        outside[lost] = UNKNOWN
+        if deep and len(lost) and "E" not in self.matrices:
+            outside[lost] = seen_from_outside(
+                self.closed.A[lost],
+                {name: M[lost] for name, M in self.matrices.items()},
+                self.parts(lost).get("K"),
+                sign=self.sign,
+                feed=self.settings.loop.feed,
+                entry_error=self.entry_error(lost),
+                dt=self.section.dt,
+            )
+            for row in lost[outside[lost] == YES]:
+                judgement.reason[row] += ", hidden: no input and output together show it"
+        return {"stable_inside": inside, "stable_outside": outside}
+
+
+def _only_short(judgement: Judgement) -> NDArray[np.bool_]:
+    """Where the doubt is about a requirement, and stability is not in doubt."""
+    about = judgement.doubt
+    return np.asarray((about != "") & (about != STABILITY) & (about != CROSS_CHECK))
+
+
+def _without(parts: Mapping[str, Floats], kept: NDArray[np.bool_], feed: str) -> dict[str, Floats]:
+    """Leave states out of matrices and gains."""
+    cut = dict(parts)
+    for name in parts:
+        if name in "AB":
+            cut[name] = cut[name][:, kept]
+        if name in "AC" or (name == "K" and feed == "states"):
+            cut[name] = cut[name][:, :, kept]
+    return cut

@@ -1,0 +1,105 @@
+"""Read Parquet tables, a block of rows at a time."""
+
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from ssaudit.errors import SourceError
+from ssaudit.intake.guard import MOST_POINTS, WHOLE_BYTES, damage_reported
+from ssaudit.intake.table import Cells
+
+ROWS = 20_000
+# Long tables have a row an entry, so more rows than points.
+MOST_ROWS = 200 * MOST_POINTS
+# Memory that one page may claim; pages hold a megabyte as a rule.
+BUFFER_BYTES = 1_000_000
+
+
+@dataclass(frozen=True, eq=False)
+class ParquetTable:
+    """An open Parquet file.
+
+    Attributes
+    ----------
+    file : pyarrow.parquet.ParquetFile
+        The file.
+    where : str
+        Its name, for messages.
+    """
+
+    file: Any
+    where: str
+
+    @property
+    def columns(self) -> list[str]:
+        """Names of its columns."""
+        return list(self.file.schema_arrow.names)
+
+    def blocks(self, wanted: Sequence[str]) -> Iterator[dict[str, Cells]]:
+        """Read blocks of rows of some columns."""
+        reader = self.file.iter_batches(batch_size=ROWS, columns=list(wanted), use_threads=False)
+        while True:
+            with damage_reported(self.where):
+                block = next(reader, None)
+                if block is None:
+                    return
+                plain = {name: _plain(block.column(block.schema.get_field_index(name)))
+                         for name in wanted}  # fmt: skip
+            yield {name: Cells(values) for name, values in plain.items()}
+
+
+def _plain(values: Any) -> Any:
+    """Cells without the dictionary that they may be coded by."""
+    import pyarrow
+
+    if pyarrow.types.is_dictionary(values.type):
+        return values.dictionary_decode()
+    return values
+
+
+@contextmanager
+def open_parquet(path: Path) -> Iterator[ParquetTable]:
+    """Open a Parquet table.
+
+    Raises
+    ------
+    SourceError
+        When the file is damaged, or claims sizes beyond reason.
+    """
+    import pyarrow.parquet
+
+    with damage_reported(path, "is not Parquet, or is damaged"):
+        file = pyarrow.parquet.ParquetFile(path, buffer_size=BUFFER_BYTES, pre_buffer=False)
+    with file:
+        with damage_reported(path):
+            _check_claims(file, path)
+        yield ParquetTable(file, str(path))
+
+
+def _check_claims(file: Any, path: Path) -> None:
+    """Refuse sizes that the file cannot back, and blocks too large to unpack."""
+    names = list(file.schema_arrow.names)
+    twice = [name for name in names if names.count(name) > 1] if len(names) < 100_000 else []
+    if twice:
+        raise SourceError(f"names the column {twice[0]!r} twice", where=str(path))
+    about = file.metadata
+    if not 0 < about.num_rows <= MOST_ROWS:
+        raise SourceError(f"claims {about.num_rows} rows", where=str(path))
+    size = path.stat().st_size
+    for number in range(about.num_row_groups):
+        group = about.row_group(number)
+        for column in range(group.num_columns):
+            chunk = group.column(column)
+            if not 0 <= chunk.total_compressed_size <= size:
+                raise SourceError(
+                    f"claims {chunk.total_compressed_size} bytes and holds {size}",
+                    where=f"{path}, {chunk.path_in_schema}",
+                )
+            if chunk.total_uncompressed_size > 16 * WHOLE_BYTES:
+                raise SourceError(
+                    f"is stored in blocks of {chunk.total_uncompressed_size} bytes",
+                    where=f"{path}, {chunk.path_in_schema}",
+                    do="write smaller row groups",
+                )
