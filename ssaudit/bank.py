@@ -309,7 +309,7 @@ def mark_unusable(points: Points, sections: Sequence[Section]) -> Points:
 def _times_claimed(columns: Sequence[NDArray[Any]]) -> NDArray[np.int64]:
     """How many rows share the values of each row."""
     # Equal rows have equal hashes, so only rows whose hash recurs need an exact comparison.
-    _, place, times = np.unique(_row_hashes(columns), return_inverse=True, return_counts=True)
+    _, place, times = np.unique(row_hashes(columns), return_inverse=True, return_counts=True)
     counts: NDArray[np.int64] = np.ones(len(columns[0]), dtype=np.int64)
     recurring = np.flatnonzero(times[place] > 1)
     if recurring.size:
@@ -327,7 +327,7 @@ def _times_claimed_exactly(columns: Sequence[NDArray[Any]]) -> NDArray[np.int64]
     return counts
 
 
-def _row_hashes(columns: Sequence[NDArray[Any]]) -> NDArray[np.uint64]:
+def row_hashes(columns: Sequence[NDArray[Any]]) -> NDArray[np.uint64]:
     """Hash of each row: equal for equal values, nearly always different for others."""
     hashes = np.zeros(len(columns[0]), dtype=np.uint64)
     for column in columns if len(hashes) else ():

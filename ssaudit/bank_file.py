@@ -50,12 +50,15 @@ class Batch:
         gets the most of all its batches.
     named : frozenset of str
         Those of "states", "inputs", "outputs" whose names the export states.
+    basis : str
+        How rows were told from columns: "labels", "shapes" or "".
     """
 
     points: Points
     section: Section
     digits_seen: int | None = None
     named: frozenset[str] = frozenset()
+    basis: str = ""
 
 
 @dataclass(frozen=True, eq=False)

@@ -102,14 +102,14 @@ def audit_chunk(
     chunk = _Chunk(section, matrices, closed, settings)
     deep = settings.depth != "poles"
     everywhere = np.arange(len(points))
-    E = matrices.get("E")
+    E = chunk.mass
     modes, failed = find_usable_modes(
         closed.A,
         closed.void == "",
         chunk.entry_error(everywhere) if deep else None,
         E=E,
         mass_error=None if E is None else chunk.mass_error(E),
-        dt=section.dt,
+        dt=closed.dt,
         neutral=chunk.neutral,
         vectors=deep,
     )
@@ -121,7 +121,7 @@ def audit_chunk(
         judgement = settle(judgement, modes, closed.A, chunk.entry_error, neutral=chunk.neutral)
     outcomes = chunk.prove(_rows_to_prove(settings.prove, judgement, offset))
     judgement = apply_proofs(judgement, outcomes)
-    columns = point_columns(revision, section, points, closed, modes, judgement, settings.criteria)
+    columns = point_columns(revision, points, closed, modes, judgement, settings.criteria)
     columns |= chunk.both_answers(judgement, deep)
     if settings.prove:
         columns["proof"] = np.full(len(points), "", dtype=object)
@@ -129,7 +129,7 @@ def audit_chunk(
             columns["proof"][row] = outcome
     return Part(
         columns,
-        mode_columns(section, closed, modes),
+        mode_columns(closed, modes),
         judgement.value,
         judgement.shortfall,
         judgement.missed,
@@ -163,11 +163,27 @@ class _Chunk:
     def neutral(self) -> list[int]:
         """States that the criteria exempt, by number."""
         named = self.settings.criteria.neutral
-        return [i for i, name in enumerate(self.section.states) if name in named]
+        return [i for i, name in enumerate(self.closed.states) if name in named]
+
+    @property
+    def mass(self) -> Floats | None:
+        """E of descriptor models; states of parts and compensators have a one of their own."""
+        E = self.matrices.get("E")
+        if E is None or E.shape[1] == len(self.closed.states):
+            return E
+        whole = np.tile(np.eye(len(self.closed.states)), (len(E), 1, 1))
+        whole[:, : E.shape[1], : E.shape[1]] = E
+        return whole
 
     @property
     def feed(self) -> Any:
-        return "states" if self.settings.loop.feed == "states" else "outputs"
+        plain = self.closed.open is None and self.settings.loop.feed == "states"
+        return "states" if plain else "outputs"
+
+    @property
+    def digits(self) -> int | None:
+        """Digits of the parts; assembled models carry their rounding as errors."""
+        return self.section.digits if self.closed.open is None else None
 
     @property
     def sign(self) -> int:
@@ -175,25 +191,35 @@ class _Chunk:
 
     def parts(self, rows: NDArray[np.int64]) -> dict[str, Floats]:
         """Matrices and gains of some rows; D only where the loop feeds outputs back."""
-        loop = self.settings.loop
-        K = self.closed.K
-        needed = {"none": "A", "states": "AB", "outputs": "ABCD"}[loop.feed]
-        parts = {name: self.matrices[name][rows] for name in needed}
+        K, opened = self.closed.K, self.closed.open
+        needed = {"none": "A", "states": "AB", "outputs": "ABCD"}[self.settings.loop.feed]
+        if opened is not None:
+            parts = {name: getattr(opened, name)[rows] for name in "ABCD"}
+        else:
+            parts = {name: self.matrices[name][rows] for name in needed}
         if K is not None:
             parts["K"] = np.broadcast_to(K, (len(self.closed.A), *K.shape[1:]))[rows]
         return parts
 
-    def errors(self, parts: Mapping[str, Floats]) -> dict[str, Floats]:
-        """How far these may be off, as the user states it."""
-        plain = {name: M for name, M in parts.items() if name != "K"}
-        return self.settings.loop.errors(self.section, plain, parts.get("K"))
+    def errors(self, rows: NDArray[np.int64], parts: Mapping[str, Floats]) -> dict[str, Floats]:
+        """How far these may be off, besides the digits."""
+        loop, opened = self.settings.loop, self.closed.open
+        if opened is None:
+            plain = {name: M for name, M in parts.items() if name != "K"}
+            return loop.errors(self.section, plain, parts.get("K"))
+        return {
+            **loop.errors(self.section, {}, parts["K"]),
+            **{name: error[rows] for name, error in opened.errors.items()},
+        }
 
     def mass_error(self, E: Floats) -> Floats:
         """How far the entries of E may be off."""
-        stated = self.settings.loop.errors(self.section, {"E": E}, None).get("E")
-        error = np.zeros(E.shape) if stated is None else stated
+        n = len(self.section.states)
+        error, own = np.zeros(E.shape), E[:, :n, :n]
+        stated = self.settings.loop.errors(self.section, {"E": own}, None)
+        error[:, :n, :n] += stated.get("E", 0.0)
         if self.section.digits is not None:
-            error = error + rounding_error(E, self.section.digits)
+            error[:, :n, :n] += rounding_error(own, self.section.digits)
         return error
 
     def entry_error(self, rows: NDArray[np.int64]) -> Floats | None:
@@ -205,8 +231,7 @@ class _Chunk:
             None: not at all.
         """
         parts = self.parts(rows)
-        errors = self.errors(parts)
-        digits = self.section.digits
+        errors, digits = self.errors(rows, parts), self.digits
         # Void points may hold NaN or infinity; what comes of them is not used.
         with np.errstate(all="ignore"):
             if "K" not in parts:
@@ -234,15 +259,15 @@ class _Chunk:
 
         outcomes: dict[int, tuple[str, str]] = {}
         named = np.array(self.neutral, dtype=np.int64)
-        E = self.matrices.get("E")
+        E = self.mass
         for row in rows:
             one = np.array([row])
             parts = self.parts(one)
-            errors = self.errors(parts)
+            errors = self.errors(one, parts)
             if E is not None:
                 parts["E"] = E[one]
                 errors["E"] = self.mass_error(E[one])
-            kept = ~neutral_states(self.closed.A[one], named, self.section.dt > 0)[0]
+            kept = ~neutral_states(self.closed.A[one], named, self.closed.dt > 0)[0]
             if E is None and not kept.all():
                 parts, errors = (_without(group, kept, self.feed) for group in (parts, errors))
             proof = prove_points(
@@ -255,8 +280,8 @@ class _Chunk:
                 E=parts.get("E"),
                 sign=self.sign,
                 feed=self.feed,
-                dt=self.section.dt,
-                digits=self.section.digits,
+                dt=self.closed.dt,
+                digits=self.digits,
                 errors=errors,
             )[0]
             outcomes[int(row)] = (proof.outcome, proof.how)
@@ -271,15 +296,18 @@ class _Chunk:
         outside = inside.copy()
         lost = np.flatnonzero(judgement.verdict == LOST)
         outside[lost] = UNKNOWN
-        if deep and len(lost) and "E" not in self.matrices:
+        if deep and len(lost) and self.mass is None:
+            parts = self.parts(lost)
+            if self.closed.open is None:
+                parts = {name: M[lost] for name, M in self.matrices.items()} | parts
             outside[lost] = seen_from_outside(
                 self.closed.A[lost],
-                {name: M[lost] for name, M in self.matrices.items()},
-                self.parts(lost).get("K"),
+                parts,
+                parts.get("K"),
                 sign=self.sign,
-                feed=self.settings.loop.feed,
+                feed=self.feed,
                 entry_error=self.entry_error(lost),
-                dt=self.section.dt,
+                dt=self.closed.dt,
             )
             for row in lost[outside[lost] == YES]:
                 judgement.reason[row] += ", hidden: no input and output together show it"

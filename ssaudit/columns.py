@@ -5,7 +5,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.bank import Points, Section
+from ssaudit.bank import Points
 from ssaudit.criteria import Criteria
 from ssaudit.judging import LOST, VERDICTS, VOID, Judgement, missed_names
 from ssaudit.loop.model import ClosedModels
@@ -18,7 +18,6 @@ Columns = dict[str, NDArray[Any]]
 
 def point_columns(
     revision: str,
-    section: Section,
     points: Points,
     closed: ClosedModels,
     modes: Modes,
@@ -64,7 +63,7 @@ def point_columns(
             columns["radius"] = np.where(judged, modes.radius[rows, judgement.worst], np.nan)
         else:
             columns["radius"] = np.full(count, np.nan)
-        columns["top_states"] = state_names(top, section.states)
+        columns["top_states"] = state_names(top, closed.states)
         columns |= {f"participation_{i + 1}": share[:, i] for i in range(TOP)}
     return columns
 
@@ -85,7 +84,7 @@ def _deepest(judgement: Judgement) -> NDArray[np.float64]:
     return np.asarray(np.where(known, deepest, np.nan))
 
 
-def mode_columns(section: Section, closed: ClosedModels, modes: Modes) -> Columns:
+def mode_columns(closed: ClosedModels, modes: Modes) -> Columns:
     """Columns of the modes table, in the ledger's order; conjugate pairs once."""
     # Neutral states have no pole: their places are NaN.
     keep = (modes.s.imag >= 0) & ~np.isnan(modes.s.real) & (closed.void == "")[:, np.newaxis]
@@ -102,5 +101,5 @@ def mode_columns(section: Section, closed: ClosedModels, modes: Modes) -> Column
     }
     if modes.index is not None:
         columns["radius"] = modes.radius[keep]
-        columns["top_states"] = state_names(modes.index[keep], section.states)
+        columns["top_states"] = state_names(modes.index[keep], closed.states)
     return columns

@@ -55,35 +55,34 @@ class Judgement:
     ]
 
 
-def quantity_range(
-    quantity: str, s: NDArray[np.complex128], radius: Floats
-) -> tuple[Floats, Floats, Floats]:
+def quantity_range(quantity: str, modes: Modes) -> tuple[Floats, Floats, Floats]:
     """Value of a quantity at poles, and the range it has while they stay within their radii.
 
     Parameters
     ----------
     quantity : str
         One of `ssaudit.criteria.MODE_QUANTITIES`.
-    s : (...) complex
-        Poles [1/s].
-    radius : (...) float
-        How far each may be off [1/s].
+    modes : Modes
+        The poles and their radii.
 
     Returns
     -------
-    value, low, high : (...) float
+    value, low, high : (points, n) float
 
     Examples
     --------
-    >>> quantity_range("real", np.array([-2 + 1j]), np.array([0.5]))
-    (array([-2.]), array([-2.5]), array([-1.5]))
+    >>> quantity_range("real", Modes(np.array([[-2 + 1j]]), np.array([[0.5]])))
+    (array([[-2.]]), array([[-2.5]]), array([[-1.5]]))
     """
+    s, radius = modes.s, modes.radius
     if quantity == "damping_ratio":
-        return (damping_ratio(s), *damping_ratio_radius(s, radius))
+        least, most = damping_ratio_radius(s, radius)
+        return damping_ratio(s), np.maximum(least, _sampled_damping(modes)), most
     if quantity == "natural_frequency":
         size = natural_frequency(s)
-        return size, np.maximum(size - radius, 0.0), size + radius
-    low, high = s.real - radius, s.real + radius
+        with np.errstate(invalid="ignore"):
+            return size, np.fmax(size - radius, _sampled_frequency(modes)), size + radius
+    low, high = modes.real_range()
     if quantity == "real":
         return s.real, low, high
     # -1/x rises with x on either side of 0; a pole that may lie on both has any time constant.
@@ -93,6 +92,27 @@ def quantity_range(
         np.where(across, -np.inf, time_constant(low.astype(np.complex128))),
         np.where(across, np.inf, time_constant(high.astype(np.complex128))),
     )
+
+
+def _sampled_frequency(modes: Modes) -> Floats | float:
+    """Least natural frequency by the distance from the axis, where z may be 0 and log(z) anything.
+
+    0 for continuous models, whose radii say enough.
+    """
+    return np.maximum(-modes.real_range()[1], 0.0) if modes.dt else 0.0
+
+
+def _sampled_damping(modes: Modes) -> Floats | float:
+    """Least damping ratio where z may be 0: no imaginary part of log(z)/dt exceeds pi/dt.
+
+    -1 for continuous models, whose radii say enough.
+    """
+    if not modes.dt:
+        return -1.0
+    decay = _sampled_frequency(modes)
+    with np.errstate(invalid="ignore"):
+        ratio = decay / np.hypot(decay, np.pi / modes.dt)
+    return np.where(decay == 0, -1.0, np.where(np.isinf(decay), 1.0, ratio))
 
 
 def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Criteria) -> Judgement:
@@ -116,7 +136,7 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
     count, size = modes.s.shape[0], len(criteria.requirements)
     verdict = np.full(count, OK)
     reason, about = np.full(count, "", dtype=object), np.full(count, "", dtype=object)
-    worst = _furthest_right(modes.s)
+    worst = _furthest_right(modes.s.real)
     missed = np.zeros((count, size), dtype=bool)
     value, shortfall = np.full((count, size), np.nan), np.full((count, size), -np.inf)
     deepest = np.full(count, -np.inf)
@@ -142,10 +162,10 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
     return Judgement(verdict, reason, worst, missed, value, shortfall, about, by_requirements)
 
 
-def _furthest_right(s: NDArray[np.complex128]) -> NDArray[np.int64]:
-    if s.shape[1] == 0:
-        return np.full(len(s), -1)
-    return np.asarray(np.argmax(np.where(np.isnan(s.real), -np.inf, s.real), axis=1))
+def _furthest_right(real: Floats) -> NDArray[np.int64]:
+    if real.shape[1] == 0:
+        return np.full(len(real), -1)
+    return np.asarray(np.argmax(np.where(np.isnan(real), -np.inf, real), axis=1))
 
 
 def _judge_stability(
@@ -155,18 +175,18 @@ def _judge_stability(
     worst: NDArray[np.int64],
 ) -> NDArray[np.bool_]:
     """Overrule verdicts where a pole is not surely to the left of the axis; say where in doubt."""
-    with np.errstate(invalid="ignore"):
-        surely = modes.s.real - modes.radius >= 0
-        maybe = modes.s.real + modes.radius >= 0
+    low, high = modes.real_range()
+    surely, maybe = low >= 0, high >= 0
     lost = surely.any(axis=1)
     doubt = maybe.any(axis=1) & ~lost
-    furthest = _furthest_right(modes.s)
-    worst[lost | doubt] = furthest[lost | doubt]
+    worst[lost] = _furthest_right(modes.s.real)[lost]
+    # In doubt it is the pole that may be furthest to the right; of a pair, the first.
+    worst[doubt] = _furthest_right(np.where(modes.s.imag < 0, -np.inf, high))[doubt]
     verdict[lost], verdict[doubt] = LOST, DOUBT
     reason[lost] = _lost_reasons(surely[lost].sum(axis=1), modes.z is not None)
     rows = np.flatnonzero(doubt)
-    at = modes.s.real[rows, furthest[rows]]
-    off = modes.radius[rows, furthest[rows]]
+    at = modes.s.real[rows, worst[rows]]
+    off = modes.radius[rows, worst[rows]]
     reason[rows] = _join("stability: real part ", "%.3g", at, " ± ", "%.1g", off, " 1/s reaches 0")
     return np.asarray(doubt)
 
@@ -195,15 +215,17 @@ class _Result:
 def _judge_requirement(
     requirement: Requirement, modes: Modes, inside: NDArray[np.bool_]
 ) -> _Result:
-    value, low, high = quantity_range(requirement.quantity, modes.s, modes.radius)
+    value, low, high = quantity_range(requirement.quantity, modes)
     known = ~np.isnan(modes.s.real) & ~np.isnan(value) & inside[:, np.newaxis]
     surely, maybe = _within(requirement, modes)
     shortfall = _shortfall(requirement, value, value)
     missed = known & surely & (_shortfall(requirement, high, low) > 0)
     doubt = known & maybe & (_shortfall(requirement, low, high) > 0) & ~missed
     shortfall = np.where(known & maybe, shortfall, -np.inf)
-    # A mode in doubt outranks those that pass by more; one that surely misses outranks all.
-    order = np.where(missed.any(axis=1, keepdims=True) & ~missed, -np.inf, shortfall)
+    # A mode that surely misses outranks all, and one in doubt those that pass, by however little.
+    deciding = np.where(missed.any(axis=1, keepdims=True), missed, doubt)
+    passes_over = deciding.any(axis=1, keepdims=True) & ~deciding
+    order = np.where(passes_over, -np.inf, np.fmax(shortfall, np.finfo(float).min))
     if not order.shape[1]:
         nothing = np.full(len(inside), np.nan)
         no = np.zeros(len(inside), dtype=bool)
@@ -211,7 +233,8 @@ def _judge_requirement(
     mode = np.argmax(order, axis=1)
     rows = np.arange(len(inside))
     applied = (known & maybe).any(axis=1)
-    spread = np.maximum(high - value, value - low)
+    with np.errstate(invalid="ignore"):
+        spread = np.fmax(high - value, value - low)
     any_missed, any_doubt = np.any(missed, axis=1), np.any(doubt, axis=1)
     return _Result(
         np.asarray(any_missed),
@@ -229,7 +252,7 @@ def _within(requirement: Requirement, modes: Modes) -> tuple[NDArray[np.bool_], 
         everywhere = np.ones(modes.s.shape, dtype=bool)
         return everywhere, everywhere
     bottom, top = requirement.frequency
-    _, low, high = quantity_range("natural_frequency", modes.s, modes.radius)
+    _, low, high = quantity_range("natural_frequency", modes)
     with np.errstate(invalid="ignore"):
         return (low >= bottom) & (high <= top), (high >= bottom) & (low <= top)
 

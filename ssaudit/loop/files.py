@@ -11,6 +11,7 @@ import numpy as np
 from ssaudit.errors import LoopError, SsauditError
 from ssaudit.loop.gains import ConstantGain, Gain, GainSchedule
 from ssaudit.loop.model import FEEDS, Loop
+from ssaudit.loop.part_files import read_compensator, read_parts, read_sampling
 from ssaudit.loop.uncertainty import read_uncertain
 from ssaudit.settings import (
     check_keys,
@@ -22,6 +23,7 @@ from ssaudit.settings import (
     take_words,
 )
 
+KEYS = ("sign", "feed", "gain", "uncertain", "part", "compensator", "sampling")
 COLUMN = "K:"
 # Grids of so many cells are looked at for missing breakpoints, however few rows a table has.
 MOST_CELLS = 1_000_000
@@ -35,7 +37,8 @@ def read_loop(path: str | os.PathLike[str]) -> Loop:
     path : path
         A TOML file: ``sign``, ``feed`` and ``[gain]`` with a ``matrix``, or with a ``table`` (a CSV
         file, its path relative to the loop file), its ``variables``, and what happens ``outside``;
-        ``[[uncertain]]`` tables say how far entries may be off.
+        ``[[uncertain]]`` tables say how far entries may be off, ``[[part]]`` what else is in the
+        path, ``[compensator]`` and ``[sampling]`` what the controller is besides gains.
 
     Returns
     -------
@@ -48,16 +51,45 @@ def read_loop(path: str | os.PathLike[str]) -> Loop:
     """
     where = str(path)
     about = read_toml(path, LoopError)
-    check_keys(about, ("sign", "feed", "gain", "uncertain"), where=where, error=LoopError)
+    check_keys(about, KEYS, where=where, error=LoopError)
     feed = take(about, "feed", str, where=where, error=LoopError, default="states")
     if feed not in FEEDS:
         raise LoopError(f"feed is {feed!r}", where=where, do=nearest(feed, FEEDS))
-    needs_gain = feed != "none"
-    sign = take(about, "sign", str, where=where, error=LoopError, required=needs_gain, default="")
-    table = take(about, "gain", dict, where=where, error=LoopError, required=needs_gain)
-    gain = None if table is None else _read_gain(table, Path(path))
-    tables = take(about, "uncertain", list, where=where, error=LoopError, default=[])
-    return Loop(sign, gain, feed, where, read_uncertain(tables, where))
+    needs_sign = feed != "none"
+    sign = take(about, "sign", str, where=where, error=LoopError, required=needs_sign, default="")
+    states, gain = _read_controller(about, Path(path), feed)
+    lists = {
+        key: take(about, key, list, where=where, error=LoopError, default=[])
+        for key in ("uncertain", "part")
+    }
+    sampling = take(about, "sampling", dict, where=where, error=LoopError)
+    return Loop(
+        sign,
+        gain,
+        feed,
+        where,
+        read_uncertain(lists["uncertain"], where),
+        read_parts(lists["part"], where),
+        states,
+        None if sampling is None else read_sampling(sampling, where),
+    )
+
+
+def _read_controller(
+    about: dict[str, Any], path: Path, feed: str
+) -> tuple[tuple[str, ...], Gain | None]:
+    """Read gains, and the names of the states of a dynamic compensator."""
+    where = str(path)
+    compensator = take(about, "compensator", dict, where=where, error=LoopError)
+    states, whole = ((), None) if compensator is None else read_compensator(compensator, where)
+    table = take(
+        about, "gain", dict, where=where, error=LoopError, required=feed != "none" and not whole
+    )
+    if table is None:
+        return states, whole
+    if whole is not None:
+        raise LoopError("[gain] and the matrices of [compensator] state the same", where=where)
+    return states, _read_gain(table, path)
 
 
 def files_of_loop(path: str | os.PathLike[str]) -> tuple[Path, ...]:

@@ -148,6 +148,8 @@ class GainSchedule:
         expected = (*(len(b) for b in grid), len(self.inputs), len(self.signals))
         if gains.shape != expected:
             raise LoopError(f"the schedule's gains have shape {gains.shape}, expected {expected}")
+        for kind, names in (("inputs", self.inputs), ("signals", self.signals)):
+            _names(names, kind, len(names))
         for name, values in zip(self.variables, grid, strict=True):
             if not (np.all(np.isfinite(values)) and np.all(np.diff(values) > 0)):
                 raise LoopError(f"the breakpoints of {name} do not ascend")
@@ -182,7 +184,8 @@ class GainSchedule:
                 for row in np.flatnonzero(beyond & (refused == "")):
                     refused[row] = _beyond(name, values[row], grid)
             held |= beyond
-            index, weight = _cell(np.nan_to_num(values), grid)
+            # Beyond the table, infinity included, it is the edge that is looked up.
+            index, weight = _cell(np.clip(np.nan_to_num(values), grid[0], grid[-1]), grid)
             lower.append(index)
             weights.append(weight)
         return GainsAtPoints(self._interpolate(lower, weights, count), held, refused)
@@ -222,16 +225,20 @@ Gain = ConstantGain | GainSchedule
 def _cell(
     values: NDArray[np.float64], grid: NDArray[np.float64]
 ) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
-    """Index of the breakpoint below each value, and the weight of the one above it."""
+    """Index of the breakpoint below each value in the grid, and the weight of the one above it."""
     if len(grid) == 1:
         return np.zeros(len(values), dtype=np.int64), np.zeros(len(values))
     index = np.clip(np.searchsorted(grid, values, side="right") - 1, 0, len(grid) - 2)
     weight = (values - grid[index]) / (grid[index + 1] - grid[index])
-    return index, np.clip(weight, 0.0, 1.0)
+    return index, weight
 
 
 def _beyond(name: str, value: float, grid: NDArray[np.float64]) -> str:
-    return f"outside the gain table: {name} {value:g} is not in {grid[0]:g} to {grid[-1]:g}"
+    text = f"{value:g}"
+    if grid[0] <= float(text) <= grid[-1]:
+        # Six digits would make it look as if it were inside.
+        text = repr(float(value))
+    return f"outside the gain table: {name} {text} is not in {grid[0]:g} to {grid[-1]:g}"
 
 
 def _names(names: Sequence[str] | None, kind: str, count: int) -> tuple[str, ...] | None:

@@ -1,6 +1,6 @@
 """The loop: sign, feed and gains, matched by name to the models that it closes."""
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -9,14 +9,42 @@ from numpy.typing import NDArray
 
 from ssaudit.bank import Matrices, ModelBank, Points, Section
 from ssaudit.errors import LoopError
+from ssaudit.loop.assembly import OpenLoop, insert_parts, sample, with_controller_states
 from ssaudit.loop.closing import close_output_feedback, close_state_feedback
 from ssaudit.loop.gains import Gain
+from ssaudit.loop.parts import EVERY, Part, chain
 from ssaudit.loop.uncertainty import Uncertain, misfit_of, stated_errors
+from ssaudit.modes.radii import rounding_error
 from ssaudit.settings import nearest
 
+Floats = NDArray[np.float64]
 SIGNS = {"negative": -1, "positive": 1}
 FEEDS = ("states", "outputs", "none")
 NEEDED = {"states": ("A", "B"), "outputs": ("A", "B", "C", "D"), "none": ("A",)}
+# A computer seldom takes longer than this to answer; more samples are a slip.
+MOST_LATE = 100
+
+
+@dataclass(frozen=True)
+class Sampling:
+    """How a computer closes the loop of continuous models: commands held between samples.
+
+    Parameters
+    ----------
+    dt : float
+        Sampling time [s], positive.
+    late : int
+        Samples from reading the signals to giving the command.
+    """
+
+    dt: float
+    late: int = 0
+
+    def __post_init__(self) -> None:
+        if not 0 < self.dt < np.inf:
+            raise LoopError(f"the sampling time is {self.dt:g} s, not positive")
+        if not 0 <= self.late <= MOST_LATE:
+            raise LoopError(f"late is {self.late} samples, not 0 to {MOST_LATE}")
 
 
 @dataclass(frozen=True, eq=False)
@@ -32,13 +60,22 @@ class ClosedModels:
     held : (points,) bool
         Where the gain table's edge value was held.
     K : (points or 1, inputs, signals) float or None
-        Gains in the section's order; None for models that come closed.
+        Gains as they close ``open``; None for models that come closed.
+    open : OpenLoop or None
+        What the gains close, where it is more than the plant: parts, sampling, compensator.
+    states : tuple of str
+        Names of the states of A.
+    dt : float
+        Sampling time [s] of A; 0 when continuous.
     """
 
-    A: NDArray[np.float64]
+    A: Floats
     void: NDArray[np.object_]
     held: NDArray[np.bool_]
-    K: NDArray[np.float64] | None = None
+    K: Floats | None = None
+    open: OpenLoop | None = None
+    states: tuple[str, ...] = ()
+    dt: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -57,6 +94,13 @@ class Loop:
         File name, for messages.
     uncertain : tuple of Uncertain
         How far entries of the matrices or gains may be off.
+    parts : tuple of Part
+        Parts before the inputs and behind the signals, each side in the order of the signal flow.
+    compensator : tuple of str
+        Names of the states of a dynamic compensator. The gains then have a row more a state, for
+        its derivative (its next value, when sampled), and a column more, for the state itself.
+    sampling : Sampling, optional
+        The computer that closes the loop of continuous models.
 
     Raises
     ------
@@ -78,13 +122,16 @@ class Loop:
     feed: str = "states"
     name: str = "loop"
     uncertain: tuple[Uncertain, ...] = ()
+    parts: tuple[Part, ...] = ()
+    compensator: tuple[str, ...] = ()
+    sampling: Sampling | None = None
 
     def __post_init__(self) -> None:
         if self.feed not in FEEDS:
             raise LoopError(f"feed is {self.feed!r}", where=self.name, do=nearest(self.feed, FEEDS))
         if self.feed == "none":
-            if self.gain is not None:
-                raise LoopError('feed = "none" takes no gain', where=self.name)
+            if self.gain is not None or self.parts or self.compensator or self.sampling:
+                raise LoopError('feed = "none" takes no gain and no parts', where=self.name)
             return
         if self.sign not in SIGNS:
             raise LoopError(
@@ -94,6 +141,10 @@ class Loop:
             )
         if self.gain is None:
             raise LoopError("gain is missing", where=self.name)
+        names = [part.name for part in self.parts]
+        for name in names:
+            if names.count(name) > 1:
+                raise LoopError(f"two parts are named {name!r}", where=self.name)
 
     @property
     def description(self) -> dict[str, Any]:
@@ -103,6 +154,9 @@ class Loop:
             "feed": self.feed,
             "gain": self.gain.description if self.gain else None,
             "uncertain": [statement.description for statement in self.uncertain],
+            "parts": [part.description for part in self.parts],
+            "compensator": list(self.compensator),
+            "sampling": vars(self.sampling) if self.sampling else None,
         }
 
     @property
@@ -110,7 +164,24 @@ class Loop:
         """How the loop is closed, as an engineer writes it."""
         if self.feed == "none":
             return "models as exported (closed already)"
-        return f"u = {'-' if self.sign == 'negative' else '+'}K {self.feed}"
+        text = f"u = {'-' if self.sign == 'negative' else '+'}K {self.feed}"
+        if self.compensator:
+            text += f", compensator of {len(self.compensator)} states"
+        if self.parts:
+            text += f", {len(self.parts)} part{'s' * (len(self.parts) > 1)}"
+            text += " (delays as Padé models)" * any(part.delay for part in self.parts)
+        if self.sampling:
+            text += f", sampled every {self.sampling.dt:g} s, {self.sampling.late} late"
+        return text
+
+    @property
+    def plain(self) -> bool:
+        """Whether gains alone close the plant alone."""
+        return not (self.parts or self.compensator or self.sampling)
+
+    def signals(self, section: Section) -> tuple[str, ...]:
+        """Names of what is fed back."""
+        return section.states if self.feed == "states" else section.outputs
 
     def close(self, section: Section, points: Points, matrices: Matrices) -> ClosedModels:
         """Close the models of some points of a section.
@@ -136,69 +207,123 @@ class Loop:
         usable = void == ""
         if not usable.any() or self.gain is None:
             closed = np.where(usable[:, np.newaxis, np.newaxis], matrices["A"], 0.0)
-            return ClosedModels(closed, void, np.zeros(count, bool))
+            nothing = np.zeros(count, bool)
+            return ClosedModels(closed, void, nothing, states=section.states, dt=section.dt)
         gains = self.gain.at(points.coordinates, count)
         void = np.where(usable, gains.refused, void)
-        K = arrange(gains.K, self.gain, section.inputs, self._signals(section))
-        closed, ill_posed = self._closed(matrices, K)
+        rows = (*section.inputs, *self.compensator)
+        K = arrange(gains.K, self.gain, rows, (*self.signals(section), *self.compensator))
+        # Void points may hold NaN or infinity, and finite ones may overflow; both are void.
+        with np.errstate(all="ignore"):
+            opened = None if self.plain else self.open(section, matrices)
+            if self.compensator and SIGNS[self.sign] < 0:
+                # The sign is that of the commands; the compensator's own states keep theirs.
+                K = K.copy()
+                K[:, len(section.inputs) :] *= -1
+            closed, ill_posed = self._closed(matrices, K, opened)
         void[ill_posed & (void == "")] = "algebraic loop is ill-posed: I - sign K D is singular"
         overflowed = ~np.isfinite(closed).all(axis=(1, 2)) & (void == "")
         void[overflowed] = "the closed model is not finite: its entries overflow"
         closed[void != ""] = 0.0
-        return ClosedModels(closed, void, gains.held & (void == ""), K)
+        states = section.states if opened is None else opened.states
+        dt = section.dt if opened is None else opened.dt
+        return ClosedModels(closed, void, gains.held & (void == ""), K, opened, states, dt)
+
+    def open(self, section: Section, matrices: Matrices) -> OpenLoop:
+        """Assemble what the gains close: plant, parts, sampling, compensator.
+
+        Parameters
+        ----------
+        section : Section
+            Names of the section.
+        matrices : dict of (points, rows, columns) float
+            Matrices of some points.
+
+        Returns
+        -------
+        OpenLoop
+        """
+        A, B = matrices["A"], matrices["B"]
+        given = {"A": A, "B": B}
+        if self.feed == "states":
+            C = np.broadcast_to(np.eye(A.shape[1]), A.shape)
+            D = np.zeros((len(A), A.shape[1], B.shape[2]))
+        else:
+            C, D = matrices["C"], matrices["D"]
+            given |= {"C": C, "D": D}
+        errors = self.errors(section, given, None)
+        if section.digits is not None:
+            for name, M in given.items():
+                errors[name] = errors.get(name, 0.0) + rounding_error(M, section.digits)
+        opened = OpenLoop(A, B, C, D, errors, section.states, section.dt)
+        at_inputs = chain(self.parts, section.inputs, "input")
+        at_signals = chain(self.parts, self.signals(section), "signal")
+        if not (at_inputs.trivial and at_signals.trivial):
+            opened = insert_parts(opened, at_inputs, at_signals)
+        if self.sampling is not None:
+            opened = sample(opened, self.sampling.dt, self.sampling.late)
+        return with_controller_states(opened, self.compensator)
 
     def _closed(
-        self, matrices: Matrices, K: NDArray[np.float64]
-    ) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
-        A, B, sign = matrices["A"], matrices["B"], SIGNS[self.sign]
-        # Void points may hold NaN or infinity, and finite ones may overflow; both are void.
-        with np.errstate(all="ignore"):
-            if self.feed == "states":
-                return close_state_feedback(A, B, K, sign), np.zeros(len(A), dtype=bool)
-            finite = np.isfinite(matrices["D"]).all(axis=(1, 2), keepdims=True)
-            D = np.where(finite, matrices["D"], 0.0)
-            return close_output_feedback(A, B, matrices["C"], D, K, sign)
-
-    def _signals(self, section: Section) -> tuple[str, ...]:
-        return section.states if self.feed == "states" else section.outputs
+        self, matrices: Matrices, K: Floats, opened: OpenLoop | None
+    ) -> tuple[Floats, NDArray[np.bool_]]:
+        sign = SIGNS[self.sign]
+        if opened is not None:
+            A, B, C, D = opened.A, opened.B, opened.C, opened.D
+        elif self.feed == "states":
+            A = matrices["A"]
+            return close_state_feedback(A, matrices["B"], K, sign), np.zeros(len(A), dtype=bool)
+        else:
+            A, B, C, D = (matrices[name] for name in "ABCD")
+        finite = np.isfinite(D).all(axis=(1, 2), keepdims=True)
+        return close_output_feedback(A, B, C, np.where(finite, D, 0.0), K, sign)
 
     def misfit(self, section: Section) -> str:
         """Why a section cannot be closed, "" when it can."""
         missing = [name for name in NEEDED[self.feed] if name not in section.matrices]
         if missing:
             return f"{missing[0]} is missing, and feed = {self.feed!r} needs it"
+        signals = self.signals(section)
         for statement in self.uncertain:
-            misfit = misfit_of(statement, section, self._signals(section))
+            misfit = misfit_of(statement, section, signals)
             if misfit:
                 return misfit
         if self.gain is None:
             return ""
+        if not self.plain:
+            misfit = self._misfit_of_path(section)
+            if misfit:
+                return misfit
+        extra = self.compensator
         for kind, named, valid, size in (
-            ("input", self.gain.inputs, section.inputs, 0),
-            (self.feed.removesuffix("s"), self.gain.signals, self._signals(section), 1),
+            ("input", self.gain.inputs, (*section.inputs, *extra), 0),
+            (self.feed.removesuffix("s"), self.gain.signals, (*signals, *extra), 1),
         ):
-            if named is None:
-                found = self.gain.matrix.shape[size]  # type: ignore[union-attr]
-                if found != len(valid):
-                    return (
-                        f"the gain matrix is for {found} {kind}s, the models have {len(valid)}: "
-                        f"{', '.join(valid)}"
-                    )
-                continue
-            for name in named:
-                if name not in valid:
-                    return f"the gain names {name!r}, no {kind} here: {nearest(name, valid)}"
-            missing = [name for name in valid if name not in named]
-            if missing and self.gain.unnamed == "refuse":
-                return (
-                    f"the gain does not name the {kind} {missing[0]!r}; name all of "
-                    f'{", ".join(valid)}, or set unnamed = "zero" in [gain]'
-                )
+            misfit = _misfit_of_names(self.gain, kind, named, valid, size)
+            if misfit:
+                return misfit
         return ""
 
-    def errors(
-        self, section: Section, matrices: Matrices, K: NDArray[np.float64] | None
-    ) -> dict[str, NDArray[np.float64]]:
+    def _misfit_of_path(self, section: Section) -> str:
+        """Why parts, sampling or compensator do not fit a section."""
+        continuous = bool(self.sampling) or bool(self.parts)
+        if section.dt > 0 and continuous:
+            return "parts and sampling are for continuous models; these are sampled"
+        if "E" in section.matrices and self.sampling:
+            return "descriptor models cannot be sampled"
+        for part in self.parts:
+            side, valid = (
+                ("input", section.inputs) if part.input else ("signal", self.signals(section))
+            )
+            place = part.input or part.signal
+            if place != EVERY and place not in valid:
+                return f"part {part.name!r} names no {side}: {place!r}; {nearest(place, valid)}"
+        for name in self.compensator:
+            if name in section.inputs or name in self.signals(section):
+                return f"the compensator's state {name!r} has the name of an input or a signal"
+        return ""
+
+    def errors(self, section: Section, matrices: Matrices, K: Floats | None) -> dict[str, Floats]:
         """How far the entries of matrices and gains may be off, as the user states it.
 
         Parameters
@@ -215,8 +340,8 @@ class Loop:
         dict of (points, rows, columns) float
             By matrix; empty when nothing is stated.
         """
-        with_gains = dict(matrices) if K is None else {**matrices, "K": K}
-        return stated_errors(self.uncertain, section, self._signals(section), with_gains)
+        with_gains: Mapping[str, Floats] = matrices if K is None else {**matrices, "K": K}
+        return stated_errors(self.uncertain, section, self.signals(section), with_gains)
 
     def check(self, bank: ModelBank) -> None:
         """Check that the loop fits a bank as a whole.
@@ -241,6 +366,28 @@ class Loop:
         misfits = [self.misfit(section) for section in bank.sections if section.states]
         if all(misfits):
             raise LoopError(misfits[0] if misfits else "no model to close", where=self.name)
+
+
+def _misfit_of_names(
+    gain: Gain, kind: str, named: tuple[str, ...] | None, valid: tuple[str, ...], axis: int
+) -> str:
+    """Why the names of a gain's rows or columns do not fit those of the models."""
+    if named is None:
+        found = gain.matrix.shape[axis]  # type: ignore[union-attr]
+        if found == len(valid):
+            return ""
+        names = ", ".join(valid)
+        return f"the gain matrix is for {found} {kind}s, the models have {len(valid)}: {names}"
+    for name in named:
+        if name not in valid:
+            return f"the gain names {name!r}, no {kind} here: {nearest(name, valid)}"
+    missing = [name for name in valid if name not in named]
+    if missing and gain.unnamed == "refuse":
+        return (
+            f"the gain does not name the {kind} {missing[0]!r}; name all of "
+            f'{", ".join(valid)}, or set unnamed = "zero" in [gain]'
+        )
+    return ""
 
 
 def arrange(

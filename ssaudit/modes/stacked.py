@@ -36,6 +36,10 @@ class Modes:
         Infinite poles of descriptor models, which ``s`` leaves out; None for ordinary models.
     unsolved : (points,) object or None
         Why a model has no modes, as str; "" where it has. None: all have.
+    z_radius : (points, n) float or None
+        How far each pole of sampled models may be off.
+    dt : float
+        Sampling time [s]; 0 for continuous models.
     """
 
     s: NDArray[np.complex128]
@@ -45,6 +49,26 @@ class Modes:
     share: Floats | None = None
     infinite: NDArray[np.int64] | None = None
     unsolved: NDArray[np.object_] | None = None
+    z_radius: Floats | None = None
+    dt: float = 0.0
+
+    def real_range(self) -> tuple[Floats, Floats]:
+        """Lowest and highest real part of each pole while it stays within its radius.
+
+        Of sampled models they follow from abs(z), so that a pole near z = 0, of which log(z) may be
+        anything far enough to the left, has a highest one all the same.
+
+        Returns
+        -------
+        low, high : (points, n) float
+            Real parts [1/s].
+        """
+        if self.z is None or self.z_radius is None:
+            return self.s.real - self.radius, self.s.real + self.radius
+        size = np.abs(self.z)
+        with np.errstate(divide="ignore"):
+            low = np.log(np.maximum(size - self.z_radius, 0.0)) / self.dt
+            return low, np.log(size + self.z_radius) / self.dt
 
 
 NOT_CONVERGED = "the eigenvalue iteration did not converge"
@@ -109,7 +133,7 @@ def find_usable_modes(
     rest = (found.index, found.share, found.infinite if E is not None else None, found.unsolved)
     if dt > 0:
         s, off = continuous_poles(poles, dt), continuous_radius(poles, radius, dt)
-        return Modes(s, off, poles, *rest), failed
+        return Modes(s, off, poles, *rest, radius, dt), failed
     return Modes(poles, radius, None, *rest), failed
 
 
