@@ -92,8 +92,8 @@ def _singular(loop: Array, size: Array) -> NDArray[np.bool_]:
     """Where a stack of I - σKD is singular to working precision, in whatever units.
 
     The spectral radius of abs(inverse) size, with size = I + abs(K) abs(D) the magnitude of what
-    was added up, is the least condition number that any choice of units gives (Bauer, Optimally scaled
-    matrices, Numer. Math. 5, 1963; from memory).
+    was added up, is the least condition number that any choice of units gives (Bauer, Optimally
+    scaled matrices, Numer. Math. 5, 1963; from memory).
     """
     (inverse,), failed = isolate(lambda stack: (np.linalg.inv(stack),), loop)
     (values,), lost = isolate(

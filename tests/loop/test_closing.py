@@ -46,7 +46,9 @@ def solve(P: Exact, Q: Exact) -> Exact | None:
     return [row[n:] for row in rows]
 
 
-def closed_exactly(A: Floats, B: Floats, C: Floats, D: Floats, K: Floats, sign: int) -> Exact | None:
+def closed_exactly(
+    A: Floats, B: Floats, C: Floats, D: Floats, K: Floats, sign: int
+) -> Exact | None:
     """A + σ B L C with L from u = σ K (C x + D u), so that (I - σ K D) u = σ K C x."""
     eye = exact(np.eye(B.shape[1]))
     loop = plus(eye, times(exact(K), exact(D)), -sign)

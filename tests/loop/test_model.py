@@ -92,9 +92,7 @@ def test_unnamed_signals_get_no_feedback_only_when_asked() -> None:
     partial = {"inputs": ["rudder"], "signals": ["pitch"]}
     loop = Loop("negative", gain([[2.0]], unnamed="zero", **partial))
     whole = np.array([[0, 0, 0], [0, 2.0, 0]])
-    np.testing.assert_array_equal(
-        close(loop, bank).A, close(Loop("negative", gain(whole)), bank).A
-    )
+    np.testing.assert_array_equal(close(loop, bank).A, close(Loop("negative", gain(whole)), bank).A)
     told = refusal(Loop("negative", gain([[2.0]], **partial)), bank)
     assert "does not name the input 'flap'; name all of flap, rudder" in told
 
@@ -189,9 +187,7 @@ def test_ill_posed_points_are_void_and_the_others_are_judged() -> None:
     assert found.points["max_real"].tolist()[1:] == [1.0, 0.0]
 
 
-@pytest.mark.parametrize(
-    ("feed", "change"), [("states", "B"), ("outputs", "C"), ("outputs", "D")]
-)
+@pytest.mark.parametrize(("feed", "change"), [("states", "B"), ("outputs", "C"), ("outputs", "D")])
 def test_closed_models_that_overflow_are_void(feed: str, change: str) -> None:
     one = np.ones((2, 1, 1))
     matrices = {"A": -one, "B": one, "C": one, "D": 0 * one}

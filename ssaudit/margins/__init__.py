@@ -1,0 +1,1 @@
+"""Distances to trouble: gain ranges, loop margins, disk margins, stability radii."""

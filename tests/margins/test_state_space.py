@@ -1,0 +1,73 @@
+import numpy as np
+import pytest
+
+from ssaudit.errors import LoopError
+from ssaudit.margins.state_space import (
+    feed_back,
+    read_loop,
+    respond,
+    respond_with_slope,
+    response_noise,
+    sensitivity_of,
+    to_continuous,
+    typical_frequency,
+    unwarp,
+)
+
+
+def test_closing_agrees_with_the_responses(tools):
+    loop = read_loop(*tools.random(np.random.default_rng(1), 20, 5, 2, direct=0.2))
+    owner, w = np.arange(20), np.geomspace(0.1, 100, 20)
+    L, k = respond(loop, owner, w), np.linspace(-2, 2, 20)
+    closed = np.linalg.solve((np.eye(2) + k[:, None, None] * L).swapaxes(1, 2), L.swapaxes(1, 2))
+    T = respond(feed_back(loop, k), owner, w)
+    np.testing.assert_allclose(T, closed.swapaxes(1, 2), rtol=1e-9)
+    S = respond(sensitivity_of(loop), owner, w)
+    np.testing.assert_allclose(S @ (np.eye(2) + L), np.broadcast_to(np.eye(2), S.shape), atol=1e-9)
+
+
+def test_mapped_response_equals_the_sampled_one(tools):
+    dt = 0.02
+    A, B, C, D = loops = tools.random(np.random.default_rng(2), 15, 4, dt=dt, direct=1.0)
+    mapped = to_continuous(read_loop(*loops), dt)
+    w = np.geomspace(0.01, 1e3, 15)
+    z = np.exp(1j * unwarp(w, dt) * dt)
+    sampled = D + C @ np.linalg.solve(z[:, None, None] * np.eye(4) - A, B.astype(complex))
+    np.testing.assert_allclose(respond(mapped, np.arange(15), w), sampled, rtol=1e-9)
+
+
+def test_slope_agrees_with_differences(tools):
+    loop = read_loop(*tools.random(np.random.default_rng(3), 10, 4))
+    owner, w, h = np.arange(10), np.geomspace(0.1, 100, 10), 1e-6
+    _, slope = respond_with_slope(loop, owner, w)
+    change = (respond(loop, owner, w * (1 + h)) - respond(loop, owner, w * (1 - h))) / (
+        2 * h * w[:, None, None]
+    )
+    np.testing.assert_allclose(slope, change, rtol=1e-5, atol=1e-9 * np.abs(slope).max())
+
+
+def test_a_pole_on_the_axis_and_infinity():
+    loop = read_loop([[[0.0]]], [[[1.0]]], [[[1.0]]], [[[0.25]]])
+    response = respond(loop, np.zeros(3, dtype=int), np.array([0.0, 1.0, np.inf]))[:, 0, 0]
+    assert np.isnan(response[0])
+    np.testing.assert_allclose(response[1:], [0.25 - 1j, 0.25])
+
+
+def test_noise_is_that_of_cancelling_terms():
+    # 1/(s + 1) - 1/(s + 1): nothing but rounding is left.
+    A, B, C = -np.eye(2)[None], np.ones((1, 2, 1)), np.array([[[1.0, -1.0]]])
+    loop = read_loop(A, B, C, np.zeros((1, 1, 1)))
+    owner, w = np.array([0]), np.array([0.3])
+    assert np.abs(respond(loop, owner, w)).item() <= response_noise(loop, owner, w).item()
+
+
+def test_typical_frequency_of_poles_at_zero():
+    np.testing.assert_array_equal(typical_frequency(np.zeros((2, 3), dtype=complex)), 1.0)
+    assert typical_frequency(np.zeros((2, 0), dtype=complex)).shape == (2,)
+
+
+def test_shapes_are_named_in_the_error():
+    with pytest.raises(LoopError, match=r"\(1, 2, 1\)"):
+        read_loop(
+            np.zeros((1, 3, 3)), np.zeros((1, 2, 1)), np.zeros((1, 1, 3)), np.zeros((1, 1, 1))
+        )
