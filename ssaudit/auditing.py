@@ -12,7 +12,7 @@ import numpy as np
 
 from ssaudit.bank import Matrices, MatrixDigest, ModelBank, Points, Section, bank_digest, chunks_of
 from ssaudit.chunk import DEPTHS, PROVE, Part, Settings, audit_chunk
-from ssaudit.columns import Columns
+from ssaudit.columns import Columns, concatenated
 from ssaudit.criteria import Criteria
 from ssaudit.errors import BankError, SsauditError
 from ssaudit.loop.model import Loop
@@ -25,6 +25,8 @@ if TYPE_CHECKING:
 # Bytes of state matrices in one chunk: small enough for the processor's cache, large enough that
 # handing chunks over costs nothing.
 CHUNK_BYTES = 2_000_000
+# Margins take milliseconds a point, so that few points keep a worker busy.
+MARGIN_POINTS = 64
 # Chunks in flight beyond the one that each worker holds.
 AHEAD = 2
 Progress = Callable[[str, int, int], None]
@@ -58,6 +60,7 @@ def audit(
     criteria: Criteria,
     *,
     depth: str = "modes",
+    real_radius: bool = False,
     prove: str = "",
     workers: int | None = None,
     chunk: int | None = None,
@@ -74,7 +77,11 @@ def audit(
     criteria : Criteria
         What they are judged by.
     depth : str
-        "poles", or "modes" (adds eigenvectors, participation and how far each pole may be off).
+        "poles", "modes" (adds eigenvectors, participation and how far each pole may be off), or
+        "margins" (adds the distance to trouble).
+    real_radius : bool
+        At depth margins, whether to find the radii for real changes, which takes longer than all
+        the rest. They are found anyway when the criteria ask for them.
     prove : str
         "doubt", "worst" or "all": settle these points by proof, which needs the extra ``prove``.
     workers : int, optional
@@ -108,13 +115,23 @@ def audit(
 
     tally = Tally(bank.revision, criteria, worst)
     points, modes = [], []
-    for part in audit_parts(bank, loop, criteria, depth=depth, workers=workers, chunk=chunk):
+    for part in audit_parts(
+        bank,
+        loop,
+        criteria,
+        depth=depth,
+        prove=prove,
+        workers=workers,
+        chunk=chunk,
+        worst=worst,
+    ):
         tally.add(part.points, part.values, part.shortfall, part.missed)
-        points.append(pd.DataFrame(_for_pandas(part.points)))
-        modes.append(pd.DataFrame(named_modes(part)))
+        points.append(part.points)
+        modes.append(named_modes(part))
+    # Joined before pandas chooses types, which it would choose otherwise for a part without modes.
     return Audit(
-        pd.concat(points, ignore_index=True),
-        pd.concat(modes, ignore_index=True),
+        pd.DataFrame(_for_pandas(concatenated(points))),
+        pd.DataFrame(concatenated(modes)),
         tally.result(),
         bank.ids_given,
     )
@@ -147,6 +164,7 @@ def audit_parts(
     criteria: Criteria,
     *,
     depth: str = "modes",
+    real_radius: bool = False,
     prove: str = "",
     workers: int | None = None,
     chunk: int | None = None,
@@ -157,7 +175,7 @@ def audit_parts(
 
     Parameters
     ----------
-    bank, loop, criteria, depth, prove, workers, chunk
+    bank, loop, criteria, depth, real_radius, prove, workers, chunk
         As for `audit`.
     worst : int
         How many points count as the worst, where these are to be proved; they are found by an
@@ -178,8 +196,10 @@ def audit_parts(
     for name, value, valid in (("depth", depth, DEPTHS), ("prove", prove, ("", *PROVE))):
         if value not in valid:
             raise SsauditError(f"{name} is {value!r}", do=f"choose one of {', '.join(valid)}")
+    if not len(bank):
+        raise BankError("holds no points", where=bank.name)
     loop.check(bank)
-    criteria.check(bank)
+    criteria.check(bank, depth)
     if prove:
         import_flint()
     chosen: str | frozenset[int] = prove
@@ -188,7 +208,8 @@ def audit_parts(
         for part in _parts(bank, Settings(loop, criteria, depth), workers, chunk, progress):
             tally.add(part.points, part.values, part.shortfall, part.missed)
         chosen = tally.worst_places
-    yield from _parts(bank, Settings(loop, criteria, depth, chosen), workers, chunk, progress)
+    settings = Settings(loop, criteria, depth, chosen, real_radius)
+    yield from _parts(bank, settings, workers, chunk, progress)
 
 
 def _parts(
@@ -203,7 +224,7 @@ def _parts(
     digests: list[MatrixDigest] = []
     waiting: deque[Future[Part]] = deque()
     done = 0
-    work = _work(bank, chunk, digests)
+    work = _readable(bank, _work(bank, settings, chunk, digests))
     with ThreadPoolExecutor(number) as pool:
         try:
             while True:
@@ -225,14 +246,31 @@ def _parts(
     _verify(bank, digests)
 
 
+def _readable(
+    bank: ModelBank, work: Iterator[tuple[Section, Points, Matrices, int]]
+) -> Iterator[tuple[Section, Points, Matrices, int]]:
+    """Pass work on; what the library raises where a file is damaged is told in our words."""
+    try:
+        yield from work
+    except (OSError, RuntimeError) as error:
+        raise BankError(
+            f"is damaged: a part of it cannot be read ({error})",
+            where=bank.name,
+            do="ingest the export again",
+        ) from error
+
+
 def _work(
-    bank: ModelBank, chunk: int | None, digests: list[MatrixDigest]
+    bank: ModelBank, settings: Settings, chunk: int | None, digests: list[MatrixDigest]
 ) -> Iterator[tuple[Section, Points, Matrices, int]]:
     """Chunks of all sections, with their places; digests are taken on the way."""
     offset = 0
     for section in bank.sections:
         digests.append(MatrixDigest())
-        size = chunk or max(1, CHUNK_BYTES // max(8, 8 * len(section.states) ** 2))
+        fitting = max(1, CHUNK_BYTES // max(8, 8 * len(section.states) ** 2))
+        if settings.depth == "margins":
+            fitting = min(fitting, MARGIN_POINTS)
+        size = chunk or fitting
         for within, matrices in chunks_of(section, size):
             if bank.stored_digest:
                 digests[-1].update(matrices)

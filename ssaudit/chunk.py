@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from ssaudit.bank import Matrices, Points, Section
 from ssaudit.columns import Columns, mode_columns, point_columns
 from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
+from ssaudit.distances import Distances, find_distances
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
 from ssaudit.loop.model import SIGNS, ClosedModels, Loop
 from ssaudit.modes.hidden import NO, UNKNOWN, YES
@@ -20,7 +21,7 @@ from ssaudit.outside import seen_from_outside
 from ssaudit.settling import apply_proofs, settle
 
 Floats = NDArray[np.float64]
-DEPTHS = ("poles", "modes")
+DEPTHS = ("poles", "modes", "margins")
 PROVE = ("doubt", "worst", "all")
 
 
@@ -35,7 +36,9 @@ class Settings:
     criteria : Criteria
         What they are judged by.
     depth : str
-        "poles" or "modes".
+        "poles", "modes" or "margins".
+    real_radius : bool
+        Whether depth margins finds the radii for real changes too.
     prove : str or container of int
         Which points to prove: "" none, "doubt" those in doubt, "all", or places in the bank.
     """
@@ -44,6 +47,7 @@ class Settings:
     criteria: Criteria
     depth: str = "modes"
     prove: str | Container[int] = ""
+    real_radius: bool = False
 
 
 @dataclass(frozen=True, eq=False)
@@ -116,13 +120,16 @@ def audit_chunk(
     if modes.unsolved is not None:
         unsolved = failed & (closed.void == "")
         closed.void[unsolved] = modes.unsolved[unsolved]
-    judgement = judge(modes, points, closed.void, settings.criteria)
+    distances = chunk.distances() if settings.depth == "margins" else None
+    judgement = judge(modes, points, closed.void, settings.criteria, distances)
     if E is None:
         judgement = settle(judgement, modes, closed.A, chunk.entry_error, neutral=chunk.neutral)
     outcomes = chunk.prove(_rows_to_prove(settings.prove, judgement, offset))
     judgement = apply_proofs(judgement, outcomes)
     columns = point_columns(revision, points, closed, modes, judgement, settings.criteria)
     columns |= chunk.both_answers(judgement, deep)
+    if distances is not None:
+        columns |= {**distances.quantities, **distances.places}
     if settings.prove:
         columns["proof"] = np.full(len(points), "", dtype=object)
         for row, (outcome, _) in outcomes.items():
@@ -286,6 +293,32 @@ class _Chunk:
             )[0]
             outcomes[int(row)] = (proof.outcome, proof.how)
         return outcomes
+
+    def distances(self) -> Distances:
+        """Distances to trouble of all rows; NaN at void points and descriptor models."""
+        wanted = self.closed.void == ""
+        if self.mass is not None:
+            wanted[:] = False
+        rows = np.flatnonzero(wanted)
+        closed = self.closed
+        some = ClosedModels(
+            closed.A[rows],
+            closed.void[rows],
+            closed.held[rows],
+            closed.K if closed.K is None or len(closed.K) == 1 else closed.K[rows],
+            None if closed.open is None else closed.open.at(rows),
+            closed.states,
+            closed.dt,
+        )
+        matrices = {name: M[rows] for name, M in self.matrices.items()}
+        asked = any("real_" in r.quantity for r in self.settings.criteria.requirements)
+        return find_distances(
+            self.settings.loop,
+            self.section,
+            matrices,
+            some,
+            real_radius=asked or self.settings.real_radius,
+        ).spread(rows, len(closed.A))
 
     def both_answers(self, judgement: Judgement, deep: bool) -> Columns:
         """Whether each point is stable inside, and whether it seems so from outside."""

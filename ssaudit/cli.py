@@ -105,9 +105,15 @@ def _add_audit(commands: Any) -> None:
     parser.add_argument("--ledger", type=Path, metavar="DIR", help="log the run in this ledger")
     parser.add_argument(
         "--depth",
-        choices=("poles", "modes"),
+        choices=("poles", "modes", "margins"),
         default="modes",
-        help="poles: the fast look; modes (default): vectors, participation, trust",
+        help="poles: the fast look; modes (default): vectors, participation, trust; margins: the "
+        "distance to trouble",
+    )
+    parser.add_argument(
+        "--real-radius",
+        action="store_true",
+        help="at depth margins, find the stability radii for real changes too (slow)",
     )
     parser.add_argument(
         "--prove",
@@ -226,6 +232,7 @@ def _audit(options: argparse.Namespace) -> int:
             ledger=options.ledger,
             csv=options.csv,
             depth=options.depth,
+            real_radius=options.real_radius,
             prove=options.prove,
             worst=options.worst,
             workers=options.workers,

@@ -1,5 +1,6 @@
 """Columns of the points and the modes table, as they stand in the ledger."""
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -14,6 +15,11 @@ from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_cons
 from ssaudit.modes.stacked import Modes
 
 Columns = dict[str, NDArray[Any]]
+
+
+def concatenated(parts: Sequence[Columns]) -> Columns:
+    """Join tables of the same columns, one below the other; there is at least one."""
+    return {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
 
 
 def point_columns(

@@ -27,6 +27,25 @@ MODE_QUANTITIES = {
     "natural_frequency": "rad/s",
     "time_constant": "s",
 }
+# What can be required of a point, at depth margins: the worst of its loops, or of the whole.
+POINT_QUANTITIES = {
+    "gain_margin_db": "dB",
+    "phase_margin_deg": "deg",
+    "delay_margin_s": "s",
+    "peak_sensitivity": "",
+    "peak_complementary": "",
+    "disk_margin": "",
+    "disk_margin_input": "",
+    "disk_margin_output": "",
+    "disk_margin_both": "",
+    "gain_factor_low": "",
+    "gain_factor_high": "",
+    "stability_radius": "1/s",
+    "stability_radius_scaled": "1/s",
+    "real_stability_radius": "1/s",
+    "real_stability_radius_scaled": "1/s",
+}
+QUANTITIES = {**MODE_QUANTITIES, **POINT_QUANTITIES}
 STABILITY = "stability"
 # What a point may be in doubt about, besides requirements.
 CROSS_CHECK = "cross-check"
@@ -43,7 +62,7 @@ class Requirement:
     name : str
         What the engineer calls it.
     quantity : str
-        One of `MODE_QUANTITIES`.
+        One of `QUANTITIES`.
     at_least, at_most : float, optional
         Limits that still pass, in the quantity's unit; at least one of them.
     frequency : (low, high), optional
@@ -73,10 +92,12 @@ class Requirement:
         # The ledger joins names by "; ".
         if not self.name or self.name in (STABILITY, CROSS_CHECK) or "; " in self.name:
             raise CriteriaError(f"a requirement cannot be named {self.name!r}")
-        if self.quantity not in MODE_QUANTITIES:
+        if self.quantity not in QUANTITIES:
             raise CriteriaError(
-                f"unknown quantity {self.quantity!r}", do=nearest(self.quantity, MODE_QUANTITIES)
+                f"unknown quantity {self.quantity!r}", do=nearest(self.quantity, QUANTITIES)
             )
+        if self.frequency is not None and not self.of_modes:
+            raise CriteriaError(f"frequency is for modes, and {self.quantity} is of a whole point")
         if self.at_least is None and self.at_most is None:
             raise CriteriaError("neither at_least nor at_most is given")
         if self.at_least is not None and self.at_most is not None and self.at_least > self.at_most:
@@ -89,7 +110,12 @@ class Requirement:
     @property
     def unit(self) -> str:
         """Unit of the limits."""
-        return MODE_QUANTITIES[self.quantity]
+        return QUANTITIES[self.quantity]
+
+    @property
+    def of_modes(self) -> bool:
+        """Whether it is about every mode, and not about the point as a whole."""
+        return self.quantity in MODE_QUANTITIES
 
     @property
     def limits(self) -> str:
@@ -185,13 +211,15 @@ class Criteria:
             "doubt": self.doubt,
         }
 
-    def check(self, bank: ModelBank) -> None:
-        """Check that what the criteria name exists in a bank.
+    def check(self, bank: ModelBank, depth: str = "margins") -> None:
+        """Check that what the criteria name exists in a bank, and is found at a depth.
 
         Parameters
         ----------
         bank : ModelBank
             The bank.
+        depth : str
+            Depth of the audit.
 
         Raises
         ------
@@ -210,6 +238,12 @@ class Criteria:
                    **dict.fromkeys(bank.points.tags, "words")}  # fmt: skip
         for requirement in self.requirements:
             where = f"{self.name}, {requirement.name!r}"
+            if not requirement.of_modes and depth != "margins":
+                raise CriteriaError(
+                    f"{requirement.quantity} is not found at depth {depth}",
+                    where=where,
+                    do="audit with --depth margins",
+                )
             for key, place in requirement.where.items():
                 if key not in columns:
                     raise CriteriaError(

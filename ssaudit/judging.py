@@ -8,11 +8,14 @@ from numpy.typing import NDArray
 
 from ssaudit.bank import Points
 from ssaudit.criteria import STABILITY, Criteria, Requirement
+from ssaudit.distances import Distances
 from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_constant
 from ssaudit.modes.radii import damping_ratio_radius
 from ssaudit.modes.stacked import Modes, distinct_rows
 
 Floats = NDArray[np.float64]
+# Peaks and radii are found to 1e-7 of themselves; a verdict nearer to its limit is in doubt.
+DISTANCE_TOLERANCE = 1e-6
 # From the best to the worst for sorting; a void point could not be judged.
 VERDICTS = ("ok", "void", "short", "doubt", "lost")
 OK, VOID, SHORT, DOUBT, LOST = range(5)
@@ -115,7 +118,13 @@ def _sampled_damping(modes: Modes) -> Floats | float:
     return np.where(decay == 0, -1.0, np.where(np.isinf(decay), 1.0, ratio))
 
 
-def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Criteria) -> Judgement:
+def judge(
+    modes: Modes,
+    points: Points,
+    void: NDArray[np.object_],
+    criteria: Criteria,
+    distances: Distances | None = None,
+) -> Judgement:
     """Judge some points by criteria.
 
     Parameters
@@ -128,6 +137,8 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
         Why a point could not be judged; "" where it can.
     criteria : Criteria
         What to judge by.
+    distances : Distances, optional
+        Their distance to trouble, where the criteria ask for it.
 
     Returns
     -------
@@ -142,7 +153,12 @@ def judge(modes: Modes, points: Points, void: NDArray[np.object_], criteria: Cri
     deepest = np.full(count, -np.inf)
     for column, requirement in enumerate(criteria.requirements):
         inside = requirement.applies(points)
-        result = _judge_requirement(requirement, modes, inside)
+        if requirement.of_modes:
+            result = _judge_requirement(requirement, modes, inside)
+        elif distances is not None:
+            result = _judge_distance(requirement, distances, inside, worst)
+        else:
+            continue
         missed[:, column] = result.missed
         value[:, column], shortfall[:, column] = result.value, result.shortfall
         doubtful = result.doubt & (verdict != SHORT) & (verdict != DOUBT)
@@ -246,6 +262,23 @@ def _judge_requirement(
     )
 
 
+def _judge_distance(
+    requirement: Requirement,
+    distances: Distances,
+    inside: NDArray[np.bool_],
+    mode: NDArray[np.int64],
+) -> _Result:
+    """Judge a quantity of whole points: not defined where they are not stable anyway."""
+    value = distances.quantities[requirement.quantity]
+    known = ~np.isnan(value) & inside
+    spread = np.where(np.isfinite(value), DISTANCE_TOLERANCE * np.abs(value), 0.0)
+    missed = known & (_shortfall(requirement, value + spread, value - spread) > 0)
+    doubt = known & ~missed & (_shortfall(requirement, value - spread, value + spread) > 0)
+    doubt |= distances.unknown[requirement.quantity] & inside
+    shortfall = np.where(known, _shortfall(requirement, value, value), -np.inf)
+    return _Result(missed, doubt, np.where(inside, value, np.nan), spread, shortfall, mode)
+
+
 def _within(requirement: Requirement, modes: Modes) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
     """Modes that surely, and that perhaps, lie in the requirement's range of frequencies."""
     if requirement.frequency is None:
@@ -292,7 +325,9 @@ def _doubt_reasons(
 ) -> NDArray[np.object_]:
     head = f"{requirement.name}: {requirement.quantity} "
     tail = f" {requirement.unit}".rstrip() + f" against {requirement.limits}"
-    return _join(head, "%.4g", result.value[rows], " ± ", "%.1g", result.spread[rows], tail)
+    texts = _join(head, "%.4g", result.value[rows], " ± ", "%.1g", result.spread[rows], tail)
+    texts[np.isnan(result.value[rows])] = f"{head}is not decided by the numbers"
+    return texts
 
 
 def _join(*parts: str | Floats) -> NDArray[np.object_]:

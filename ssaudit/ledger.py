@@ -20,8 +20,8 @@ from ssaudit import __version__
 from ssaudit.arrow import arrow_array
 from ssaudit.bank import ModelBank
 from ssaudit.chunk import Part
-from ssaudit.columns import Columns
-from ssaudit.criteria import Criteria
+from ssaudit.columns import concatenated
+from ssaudit.criteria import POINT_QUANTITIES, Criteria
 from ssaudit.errors import LedgerError
 from ssaudit.loop.model import Loop
 from ssaudit.settings import nearest
@@ -39,6 +39,8 @@ GROUP_POINTS = 32_768
 ENTRIES = ("run", "revision", "digest", "ids_given", "units", "max_real", "min_damping")
 COUNTS = ("total", "ok", "short", "lost", "doubt", "void")
 UNITS = {
+    **{name: unit for name, unit in POINT_QUANTITIES.items() if unit},
+    **{f"{name}_frequency": "rad/s" for name in POINT_QUANTITIES},
     "max_real": "1/s",
     "real": "1/s",
     "imag": "1/s",
@@ -280,9 +282,9 @@ class RunWriter:
         if not self._waiting:
             return
         parts, self._waiting = self._waiting, []
-        points = _concatenated([part.points for part in parts])
+        points = concatenated([part.points for part in parts])
         starts = np.cumsum([0, *(len(part.values) for part in parts[:-1])])
-        modes = _concatenated(
+        modes = concatenated(
             [
                 {**part.modes, "row": part.modes["row"] + start}
                 for part, start in zip(parts, starts, strict=True)
@@ -420,10 +422,6 @@ def finite(value: Any) -> Any:
     """Return a number for JSON, which has neither infinity nor NaN: null in their place."""
     number = float(value)
     return number if np.isfinite(number) else None
-
-
-def _concatenated(parts: list[Columns]) -> Columns:
-    return {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
 
 
 def _arrow(column: Any) -> Any:

@@ -171,13 +171,11 @@ def shown(value: Any) -> str:
     >>> shown("x" * 100)
     "'xxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxxx…"
     """
-    text = "a very long number" if _is_endless(value) else repr(value)
+    try:
+        text = repr(value)
+    except ValueError:  # Python writes out no whole number of more than 4,300 digits
+        text = "a very long number"
     return text if len(text) <= LONGEST_SHOWN else f"{text[: LONGEST_SHOWN - 1]}…"
-
-
-def _is_endless(value: Any) -> bool:
-    """Whether Python refuses to write a whole number out, as it does beyond 4,300 digits."""
-    return isinstance(value, int) and value.bit_length() > 10_000
 
 
 WORDS = {"str": "text", "dict": "a table", "list": "a list", "int": "a whole number"}

@@ -56,6 +56,7 @@ def stream_audit(
     ledger: Path | None = None,
     csv: Path | None = None,
     depth: str = "modes",
+    real_radius: bool = False,
     prove: str = "",
     worst: int = 10,
     workers: int | None = None,
@@ -72,7 +73,9 @@ def stream_audit(
     csv : path, optional
         CSV file for the points table.
     depth : str
-        "poles" or "modes".
+        "poles", "modes" or "margins".
+    real_radius : bool
+        At depth margins, whether to find the radii for real changes too.
     prove : str
         "doubt", "worst" or "all": settle these points by proof.
     worst : int
@@ -96,6 +99,8 @@ def stream_audit(
     settings = {"depth": depth, "prove": prove}
     if prove == "worst":
         settings["worst"] = str(worst)
+    if real_radius:
+        settings["real_radius"] = "yes"
     with ExitStack() as outputs:
         if ledger is not None:
             digest = run_digest(bank, loop, criteria, settings)
@@ -108,6 +113,7 @@ def stream_audit(
             loop,
             criteria,
             depth=depth,
+            real_radius=real_radius,
             prove=prove,
             workers=workers,
             worst=worst,

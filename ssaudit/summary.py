@@ -2,13 +2,13 @@
 
 from collections import Counter
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
+from ssaudit.criteria import CROSS_CHECK, POINT_QUANTITIES, STABILITY, Criteria
 from ssaudit.judging import VERDICTS
 
 Columns = Mapping[str, NDArray[Any]]
@@ -48,6 +48,41 @@ class Missed:
 
 
 @dataclass(frozen=True)
+class Nearest:
+    """Where one margin is worst of all points.
+
+    Attributes
+    ----------
+    quantity : str
+        Name of the margin, a column of the points table.
+    value : float
+        Its worst value; infinite where no point has a limit.
+    point : str
+        The point.
+    loop : str
+        The single loop, where it is of one; else "".
+    frequency : float
+        Where [rad/s]; NaN where there is none.
+    at : dict of float
+        Coordinates of the point.
+    undefined : int
+        Points at which it is not defined.
+    """
+
+    quantity: str
+    value: float
+    point: str
+    loop: str
+    frequency: float
+    at: Mapping[str, float]
+    undefined: int
+
+
+# Margins of which the greatest value is the worst; of the others the least.
+GREATEST_IS_WORST = ("gain_factor_low", "peak_sensitivity", "peak_complementary")
+
+
+@dataclass(frozen=True)
 class Summary:
     """What an audit comes down to.
 
@@ -71,6 +106,8 @@ class Summary:
         Points in doubt about a requirement, where the criteria let that count as ok.
     proofs : dict of int
         Points by outcome of their proof: stable, unstable, open; empty when none was asked for.
+    nearest : tuple of Nearest
+        The worst of each margin; empty unless depth was margins.
     max_real, min_damping : float
         Worst of all judged points [1/s; no unit]; NaN when there is none.
     """
@@ -84,6 +121,7 @@ class Summary:
     between: Mapping[str, tuple[float, float]]
     tolerated: int
     proofs: Mapping[str, int]
+    nearest: tuple[Nearest, ...]
     max_real: float
     min_damping: float
 
@@ -125,6 +163,7 @@ class Tally:
         self._between: list[dict[str, tuple[float, float]]] = [{} for _ in range(size)]
         self._all_between: dict[str, tuple[float, float]] = {}
         self._held = self._tolerated = 0
+        self._nearest: dict[str, Nearest] = {}
         self._proofs: Counter[str] = Counter()
         self._extremes = (np.nan, np.nan)
         self._seen = 0
@@ -154,6 +193,9 @@ class Tally:
             self._tolerated += int(np.count_nonzero((verdicts == "doubt") & ~grave))
         if "proof" in points:
             self._proofs.update(outcome for outcome in points["proof"] if outcome)
+        for name in POINT_QUANTITIES:
+            if name in points:
+                self._add_nearest(name, points)
         self._add_void(points["reason"][verdicts == "void"])
         self._add_worst(points)
         _widen(self._all_between, points, np.flatnonzero(verdicts != "void"))
@@ -208,6 +250,30 @@ class Tally:
             at = {n[3:]: float(points[n][row]) for n in points if n.startswith("at_")}
             self._missed_at[place] = (str(points["point"][row]), float(value[row]), at)
 
+    def _add_nearest(self, name: str, points: Columns) -> None:
+        values = points[name]
+        known = np.flatnonzero(~np.isnan(values))
+        undefined = len(values) - len(known)
+        before = self._nearest.get(name)
+        if before is not None:
+            undefined += before.undefined
+        sense = -1 if name in GREATEST_IS_WORST else 1
+        found = before or Nearest(name, np.nan, "", "", np.nan, {}, 0)
+        if len(known):
+            row = known[np.argmin(sense * values[known])]
+            if np.isnan(found.value) or sense * values[row] < sense * found.value:
+                loop = points.get(f"{name}_loop")
+                found = Nearest(
+                    name,
+                    float(values[row]),
+                    str(points["point"][row]),
+                    "" if loop is None else str(loop[row]),
+                    float(points[f"{name}_frequency"][row]),
+                    {n[3:]: float(points[n][row]) for n in points if n.startswith("at_")},
+                    0,
+                )
+        self._nearest[name] = replace(found, undefined=undefined)
+
     @property
     def worst_places(self) -> frozenset[int]:
         """Places in the bank of the worst points so far."""
@@ -235,6 +301,7 @@ class Tally:
             self._all_between,
             self._tolerated,
             dict(self._proofs),
+            tuple(self._nearest.values()),
             *self._extremes,
         )
 

@@ -33,9 +33,11 @@ def some_bank() -> ssaudit.ModelBank:
         revision="A",
         states=["heading"],
         coordinates={"speed": ([10.0, 15.0, 24.0, 30.0], "m/s")},
-        tags={"config": ["foilborne", "hullborne", "foilborne", "foilborne"],
-              "fuel": ["full", "full", "half", "empty"]},
-    )  # fmt: skip
+        tags={
+            "config": ["foilborne", "hullborne", "foilborne", "foilborne"],
+            "fuel": ["full", "full", "half", "empty"],
+        },
+    )
 
 
 def read(tmp_path: Path, text: str) -> Criteria:
@@ -84,16 +86,20 @@ def test_where_holds_at_both_ends_of_a_range_and_for_every_listed_word() -> None
 
 
 def test_open_ranges_are_allowed(tmp_path: Path) -> None:
-    criteria = read(tmp_path, '[[require]]\nname = "r"\nquantity = "real"\nat_most = 0\n'
-                              "where = { speed = [20, inf] }\nfrequency = [-inf, 3]\n")  # fmt: skip
+    criteria = read(
+        tmp_path,
+        '[[require]]\nname = "r"\nquantity = "real"\nat_most = 0\n'
+        "where = { speed = [20, inf] }\nfrequency = [-inf, 3]\n",
+    )
     (requirement,) = criteria.requirements
     assert list(requirement.applies(some_bank().points)) == [False, False, True, True]
     assert requirement.frequency == (-np.inf, 3.0)
 
 
 @pytest.mark.parametrize("quantity", MODE_QUANTITIES)
-@pytest.mark.parametrize("limits", [{"at_least": -1.0}, {"at_most": 1.0}, {"at_least": 0.0,
-                                                                          "at_most": 0.0}])  # fmt: skip
+@pytest.mark.parametrize(
+    "limits", [{"at_least": -1.0}, {"at_most": 1.0}, {"at_least": 0.0, "at_most": 0.0}]
+)
 def test_every_quantity_takes_limits_on_either_side(
     quantity: str, limits: dict[str, float]
 ) -> None:
@@ -106,7 +112,10 @@ REQUIRE = '[[require]]\nname = "r"\nquantity = "real"\nat_most = 0\n'
 @pytest.mark.parametrize(
     ("text", "told"),
     [
-        (REQUIRE.replace("real", "damping"), "unknown quantity 'damping'; did you mean damping_ratio?"),
+        (
+            REQUIRE.replace("real", "damping"),
+            "unknown quantity 'damping'; did you mean damping_ratio?",
+        ),
         (REQUIRE.replace("at_most = 0", ""), "neither at_least nor at_most is given"),
         (REQUIRE + "at_least = 1", "at_least 1 is above at_most 0"),
         (REQUIRE + "at_lest = 1", "unknown key 'at_lest'; did you mean at_least?"),
@@ -132,7 +141,7 @@ REQUIRE = '[[require]]\nname = "r"\nquantity = "real"\nat_most = 0\n'
         ('neutral = "heading"\n', "not a list"),
         ("[[require]\n", "is not TOML"),
     ],
-)  # fmt: skip
+)
 def test_mistake_in_a_criteria_file_is_named(text: str, told: str, tmp_path: Path) -> None:
     with pytest.raises(CriteriaError) as caught:
         read(tmp_path, text)
@@ -145,12 +154,14 @@ def test_mistake_in_a_criteria_file_is_named(text: str, told: str, tmp_path: Pat
 @pytest.mark.parametrize(
     ("change", "told"),
     [
-        ({"where": {"sped": (1.0, 2.0)}}, "where names no coordinate or tag of bank in memory: 'sped'; "
-                                          "did you mean speed?"),
+        (
+            {"where": {"sped": (1.0, 2.0)}},
+            "where names no coordinate or tag of bank in memory: 'sped'; did you mean speed?",
+        ),
         ({"where": {"speed": ("fast",)}}, "speed takes a range [low, high]"),
         ({"where": {"config": (1.0, 2.0)}}, "config is a tag and takes a word"),
     ],
-)  # fmt: skip
+)
 def test_criteria_that_do_not_fit_the_bank_are_refused(change: dict[str, Any], told: str) -> None:
     criteria = Criteria((Requirement("r", "real", at_most=0.0, **change),))
     with pytest.raises(CriteriaError) as caught:

@@ -39,6 +39,12 @@ class OpenLoop:
     states: tuple[str, ...]
     dt: float
 
+    def at(self, rows: NDArray[np.int64]) -> "OpenLoop":
+        """Return the models of some points."""
+        errors = {name: error[rows] for name, error in self.errors.items()}
+        matrices = (self.A[rows], self.B[rows], self.C[rows], self.D[rows])
+        return OpenLoop(*matrices, errors, self.states, self.dt)
+
 
 def insert_parts(plant: OpenLoop, at_inputs: Path, at_signals: Path) -> OpenLoop:
     """Put parts before the inputs and behind the signals of models.

@@ -243,6 +243,48 @@ class Loop:
         -------
         OpenLoop
         """
+        return self._assembled(self._plant(section, matrices), section, self.parts)
+
+    def open_without_delay(
+        self, section: Section, matrices: Matrices, side: str, channel: int
+    ) -> tuple[OpenLoop, float]:
+        """Assemble what the gains close, but for the delay of one channel.
+
+        Parameters
+        ----------
+        section : Section
+            Names of the section.
+        matrices : dict of (points, rows, columns) float
+            Matrices of some points.
+        side : str
+            "input" or "signal".
+        channel : int
+            Number of the channel.
+
+        Returns
+        -------
+        opened : OpenLoop
+            With Padé models for the delays of all other channels.
+        delay : float
+            The channel's own delay [s]; 0 for sampled loops, in which it stays a part.
+        """
+        plant = self._plant(section, matrices)
+        names = section.inputs if side == "input" else self.signals(section)
+        late = float(chain(self.parts, names, side).delays[channel])
+        if not late or self.sampling is not None:
+            return self._assembled(plant, section, self.parts), 0.0
+        kept = []
+        for part in self.parts:
+            place = getattr(part, side)
+            if not part.delay or place not in (names[channel], EVERY):
+                kept.append(part)
+            elif place == EVERY:
+                others = [name for i, name in enumerate(names) if i != channel]
+                kept += [part.moved(side, name) for name in others]
+        return self._assembled(plant, section, kept), late
+
+    def _plant(self, section: Section, matrices: Matrices) -> OpenLoop:
+        """Models from inputs to signals, with what is known of their errors."""
         A, B = matrices["A"], matrices["B"]
         given = {"A": A, "B": B}
         if self.feed == "states":
@@ -255,9 +297,12 @@ class Loop:
         if section.digits is not None:
             for name, M in given.items():
                 errors[name] = errors.get(name, 0.0) + rounding_error(M, section.digits)
-        opened = OpenLoop(A, B, C, D, errors, section.states, section.dt)
-        at_inputs = chain(self.parts, section.inputs, "input")
-        at_signals = chain(self.parts, self.signals(section), "signal")
+        return OpenLoop(A, B, C, D, errors, section.states, section.dt)
+
+    def _assembled(self, plant: OpenLoop, section: Section, parts: Sequence[Part]) -> OpenLoop:
+        at_inputs = chain(parts, section.inputs, "input")
+        at_signals = chain(parts, self.signals(section), "signal")
+        opened = plant
         if not (at_inputs.trivial and at_signals.trivial):
             opened = insert_parts(opened, at_inputs, at_signals)
         if self.sampling is not None:

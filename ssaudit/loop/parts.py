@@ -1,7 +1,7 @@
 """Parts in the path between controller and plant: actuators, sensors, filters, delays."""
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import factorial
 from typing import Any
 
@@ -61,6 +61,13 @@ class Part:
     def states(self) -> tuple[str, ...]:
         """Names of its states."""
         return tuple(f"{self.name}.{i + 1}" for i in range(len(self.A)))
+
+    def moved(self, side: str, channel: str) -> "Part":
+        """Return the copy of a part for every channel that one of them gets."""
+        name = f"{self.name} {channel}"
+        if side == "input":
+            return replace(self, name=name, input=channel)
+        return replace(self, name=name, signal=channel)
 
     @property
     def description(self) -> dict[str, Any]:

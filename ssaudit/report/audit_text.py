@@ -6,6 +6,7 @@ from typing import Any
 from rich.console import Group, RenderableType
 from rich.text import Text
 
+from ssaudit.criteria import QUANTITIES
 from ssaudit.report.words import (
     STYLES,
     aligned,
@@ -23,6 +24,15 @@ from ssaudit.summary import Summary
 MOST_REQUIREMENTS = 4
 MOST_REASONS = 2
 LONGEST_ID = 24
+# Of each kind of margin one, so that the screen stays short; the others are in the ledger.
+SHOWN_MARGINS = (
+    "gain_margin_db",
+    "phase_margin_deg",
+    "delay_margin_s",
+    "peak_sensitivity",
+    "disk_margin",
+    "stability_radius_scaled",
+)
 
 
 def audit_text(report: AuditReport) -> RenderableType:
@@ -44,7 +54,7 @@ def audit_text(report: AuditReport) -> RenderableType:
     parts += [*_proofs(summary), Text()]
     if summary.worst:
         parts += [*_worst(summary, units), Text()]
-    parts += [*_missed(summary, units), *_void(summary), Text()]
+    parts += [*_missed(summary, units), *_margins(summary), *_void(summary), Text()]
     parts += [*_provenance(report), Text(), cautions()]
     return Group(*parts)
 
@@ -134,6 +144,34 @@ def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
             table.append(one_line(f"    {_within(missed.between, summary.between, units)}", "dim"))
     more = len(summary.missed) - len(shown)
     return [*table, one_line(f"and {more} more requirements: --json")] if more else table
+
+
+def _margins(summary: Summary) -> list[Text]:
+    """Show the worst of each margin, and the range that one factor may have everywhere."""
+    found = {nearest.quantity: nearest for nearest in summary.nearest if nearest.point}
+    if not found:
+        return []
+    rows = []
+    for name in SHOWN_MARGINS:
+        nearest = found.get(name)
+        if nearest is not None:
+            unit = "" if name.endswith(("_db", "_deg", "_s")) else QUANTITIES[name]
+            rows.append(
+                [
+                    f"{name} {unit}".rstrip(),
+                    number(nearest.value, 3),
+                    shortened(nearest.point),
+                    number(nearest.frequency, 3),
+                    nearest.loop,
+                ]
+            )
+    lines = [Text(), *aligned(["worst margins", "", "at point", "rad/s", "loop"], "lrlrl", rows)]
+    low, high = found.get("gain_factor_low"), found.get("gain_factor_high")
+    if low is not None and high is not None:
+        text = f"one factor on all gains: stable from {number(low.value, 3)} to "
+        text += f"{number(high.value, 3)} at every stable point"
+        lines.append(one_line(text))
+    return lines
 
 
 def _within(

@@ -4,6 +4,7 @@ import json
 from collections.abc import Mapping
 from typing import Any
 
+from ssaudit.criteria import POINT_QUANTITIES
 from ssaudit.drifting import Drift
 from ssaudit.ledger import LoggedRun, finite
 from ssaudit.report.audit_text import participating
@@ -62,6 +63,18 @@ def audit_record(report: AuditReport) -> dict[str, Any]:
             for missed in summary.missed
         ],
         "void": summary.void,
+        "margins": [
+            {
+                "quantity": nearest.quantity,
+                "value": finite(nearest.value),
+                "point": nearest.point or None,
+                "loop": nearest.loop or None,
+                "frequency": finite(nearest.frequency),
+                "at": nearest.at,
+                "undefined": nearest.undefined,
+            }
+            for nearest in summary.nearest
+        ],
         "held": summary.held,
         "tolerated": summary.tolerated,
         "proofs": summary.proofs,
@@ -88,7 +101,7 @@ def _point(point: Mapping[str, Any]) -> dict[str, Any]:
         "stable_inside": _answer(point["stable_inside"]),
         "stable_outside": _answer(point["stable_outside"]),
         "missed": [name for name in point["missed"].split("; ") if name],
-        **{name: finite(point[name]) for name in NUMBERS if name in point},
+        **{name: finite(point[name]) for name in (*NUMBERS, *POINT_QUANTITIES) if name in point},
         "top_states": participating(point),
     }
 

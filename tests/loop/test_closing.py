@@ -22,8 +22,13 @@ def exact(M: Floats) -> Exact:
 
 
 def times(P: Exact, Q: Exact) -> Exact:
-    return [[sum((a * b for a, b in zip(row, column, strict=True)), Fraction(0))
-             for column in zip(*Q, strict=True)] for row in P]  # fmt: skip
+    return [
+        [
+            sum((a * b for a, b in zip(row, column, strict=True)), Fraction(0))
+            for column in zip(*Q, strict=True)
+        ]
+        for row in P
+    ]
 
 
 def plus(P: Exact, Q: Exact, factor: int = 1) -> Exact:

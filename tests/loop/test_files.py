@@ -63,8 +63,12 @@ def loop_failure(write: Write, text: str) -> str:
 
 
 def test_constant_matrix_is_read_as_it_stands(write: Write) -> None:
-    loop = read_loop(write("loop.toml", 'sign = "positive"\nfeed = "states"\n[gain]\n'
-                                        "matrix = [[1, 2.5], [-3e-4, 0]]\n"))  # fmt: skip
+    loop = read_loop(
+        write(
+            "loop.toml",
+            'sign = "positive"\nfeed = "states"\n[gain]\nmatrix = [[1, 2.5], [-3e-4, 0]]\n',
+        )
+    )
     assert (loop.sign, loop.feed, loop.formula) == ("positive", "states", "u = +K states")
     assert isinstance(loop.gain, ConstantGain)
     np.testing.assert_array_equal(loop.gain.matrix, [[1, 2.5], [-3e-4, 0]])
@@ -72,8 +76,13 @@ def test_constant_matrix_is_read_as_it_stands(write: Write) -> None:
 
 
 def test_named_matrix_keeps_its_names(write: Write) -> None:
-    loop = read_loop(write("loop.toml", 'sign = "negative"\n[gain]\nmatrix = [[1, 2]]\n'
-                     'inputs = ["flap"]\nsignals = ["pitch", "heave"]\nunnamed = "zero"\n'))  # fmt: skip
+    loop = read_loop(
+        write(
+            "loop.toml",
+            'sign = "negative"\n[gain]\nmatrix = [[1, 2]]\n'
+            'inputs = ["flap"]\nsignals = ["pitch", "heave"]\nunnamed = "zero"\n',
+        )
+    )
     assert loop.feed == "states"
     assert isinstance(loop.gain, ConstantGain)
     assert (loop.gain.inputs, loop.gain.signals) == (("flap",), ("pitch", "heave"))

@@ -73,7 +73,7 @@ def test_gains_at_breakpoints_are_those_of_the_table_to_the_last_bit(
 
 @pytest.mark.parametrize("variables", [1, 2, 3, 4])
 def test_a_multilinear_gain_is_given_back_everywhere(variables: int) -> None:
-    """Product of (1 + x/unit) over the variables: the table's own form, known between the points."""
+    """Product of (1 + x/unit) over the variables: the table's own form, known everywhere."""
     unit = [20.0, 5.0, 4e-3, 3e6][:variables]
     mesh = np.meshgrid(*(1 + g / u for g, u in zip(GRID, unit, strict=False)), indexing="ij")
     gains = np.prod(mesh, axis=0)[..., None, None]

@@ -100,11 +100,17 @@ def test_unnamed_signals_get_no_feedback_only_when_asked() -> None:
 @pytest.mark.parametrize(
     ("names", "told"),
     [
-        ({"inputs": ["flap", "ruder"], "signals": STATES}, "'ruder', no input here: did you mean rudder"),
-        ({"inputs": INPUTS, "signals": ["heave", "pitch", "roll"]}, "'roll', no state here: valid: heave"),
+        (
+            {"inputs": ["flap", "ruder"], "signals": STATES},
+            "'ruder', no input here: did you mean rudder",
+        ),
+        (
+            {"inputs": INPUTS, "signals": ["heave", "pitch", "roll"]},
+            "'roll', no state here: valid: heave",
+        ),
         ({"inputs": INPUTS, "signals": ["heave", "pitch", "angle"]}, "'angle', no state here"),
     ],
-)  # fmt: skip
+)
 def test_unknown_names_are_refused_with_the_valid_ones(names: dict[str, Any], told: str) -> None:
     assert told in refusal(Loop("negative", gain(np.ones((2, 3)), **names)), some_bank())
 

@@ -109,7 +109,10 @@ def test_poles_of_random_systems_are_within_their_radii(
         assert largest_error(gap) <= MOST_ERROR * size
         # A radius that covers everything would prove nothing.
         assert radius.max() <= 100 * MOST_ERROR * size
-    assert np.median([radius.max() / np.linalg.norm(A, 2) for A, _, radius in random_gaps]) < MOST_ERROR
+    assert (
+        np.median([radius.max() / np.linalg.norm(A, 2) for A, _, radius in random_gaps])
+        < MOST_ERROR
+    )
 
 
 def test_poles_of_ill_scaled_systems_are_within_their_radii() -> None:

@@ -81,15 +81,25 @@ def audited(
         loop.write_text(
             'feed = "none"\n'
             if gain is None
-            else f'sign = "negative"\nfeed = "outputs"\n[gain]\nmatrix = {np.asarray(gain).tolist()}\n'
+            else f'sign = "negative"\nfeed = "outputs"\n[gain]\nmatrix = {gain}\n'
         )
         criteria.write_text("".join(_as_toml(item) for item in require or []))
         taken = command("ingest", source, "--revision", "published", "--bank", bank)
         assert taken.code == 0, taken.err
         ran = command(
-            "audit", bank, "--loop", loop, "--criteria", criteria, "--ledger", ledger, "--json", "-",
-            "--worst", "1000",
-        )  # fmt: skip
+            "audit",
+            bank,
+            "--loop",
+            loop,
+            "--criteria",
+            criteria,
+            "--ledger",
+            ledger,
+            "--json",
+            "-",
+            "--worst",
+            "1000",
+        )
         report = json.loads(ran.out)
         (run,) = ledger.glob("run=*")
         points, modes = (pd.read_parquet(run / f"{n}.parquet") for n in ("points", "modes"))

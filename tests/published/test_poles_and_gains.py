@@ -7,6 +7,8 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
+import ssaudit
+
 Floats = NDArray[np.float64]
 Figures = dict[str, dict[str, Any]]
 Audited = Callable[..., Any]
@@ -237,6 +239,17 @@ def test_shifted_nilpotent_matrix_is_exactly_stable_and_never_lost(
     assert point["max_real"] - point["radius"] < -figure["shift"]
 
 
+def test_shifted_nilpotent_matrix_is_proved_stable(figures: Figures) -> None:
+    """Poles cannot tell, exact arithmetic can; by the library, where the extra is installed."""
+    pytest.importorskip("flint")
+    figure = figures["nilpotent-five"]
+    A = np.array(figure["A"]) - figure["shift"] * np.eye(5)
+    bank = ssaudit.build_bank([A], revision="published")
+    loop, criteria = ssaudit.Loop("", None, "none"), ssaudit.Criteria()
+    assert ssaudit.audit(bank, loop, criteria).points["verdict"][0] == "doubt"
+    assert ssaudit.audit(bank, loop, criteria, prove="doubt").points["verdict"][0] == "ok"
+
+
 # Butterworth (1930).
 @pytest.mark.parametrize("order", [2, 3, 4])
 def test_butterworth_poles_have_the_published_damping_ratios(
@@ -249,8 +262,9 @@ def test_butterworth_poles_have_the_published_damping_ratios(
     companion[0] = -np.poly(poles).real[1:]
     found = audited({"A": [companion]}, ids=["only"])
     ratios = np.sort(found.modes["damping_ratio"])
-    np.testing.assert_allclose(ratios, figures["butterworth"]["damping_ratio"][str(order)],
-                               atol=5e-5)  # fmt: skip
+    np.testing.assert_allclose(
+        ratios, figures["butterworth"]["damping_ratio"][str(order)], atol=5e-5
+    )
     angles = np.deg2rad(90 + (2 * np.arange(1, order + 1) - 1) * 90 / order)
     expected = np.exp(1j * angles)
     np.testing.assert_allclose(

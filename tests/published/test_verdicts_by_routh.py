@@ -35,10 +35,10 @@ def routh_says_stable(p: Polynomial) -> bool:
     while lower:
         if lower[0] <= 0:
             return False
-        following = [*lower[1:], Fraction(0)]
         ratio = upper[0] / lower[0]
-        rest = [a - ratio * b for a, b in itertools.zip_longest(upper[1:], following[: len(upper) - 1],
-                                                               fillvalue=Fraction(0))]  # fmt: skip
+        # Rows end in zeros, of which one is enough.
+        following = [*lower[1:], Fraction(0)]
+        rest = [a - ratio * b for a, b in zip(upper[1:], following, strict=False)]
         upper, lower = lower, rest
     return True
 
@@ -176,8 +176,11 @@ def disagreements(
     polynomials: dict[int, list[list[int]]], points: pd.DataFrame
 ) -> tuple[list[str], int, int]:
     """Points whose verdict contradicts Routh's array; doubts off the axis; polynomials off it."""
-    allowed = {"stable": ("ok", "doubt"), "unstable": ("lost", "doubt"),
-               "on the axis": ("lost", "doubt")}  # fmt: skip
+    allowed = {
+        "stable": ("ok", "doubt"),
+        "unstable": ("lost", "doubt"),
+        "on the axis": ("lost", "doubt"),
+    }
     verdicts = dict(zip(points["point"], points["verdict"], strict=True))
     wrong, doubts, off_axis = [], 0, 0
     for degree, listed in polynomials.items():
@@ -249,8 +252,18 @@ def test_the_command_line_gives_the_same_verdicts(
     loop.write_text('feed = "none"\n')
     criteria.write_text("")
     assert command("ingest", *sources, "--revision", "routh", "--bank", bank).code == 0
-    ran = command("audit", bank, "--loop", loop, "--criteria", criteria, "--json", "-",
-                  "--csv", tmp_path / "points.csv")  # fmt: skip
+    ran = command(
+        "audit",
+        bank,
+        "--loop",
+        loop,
+        "--criteria",
+        criteria,
+        "--json",
+        "-",
+        "--csv",
+        tmp_path / "points.csv",
+    )
     table = pd.read_csv(tmp_path / "points.csv", dtype={"point": str})
     wrong, _, _ = disagreements(polynomials, table)
     assert ran.code == 1
