@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ssaudit.bank import Matrices, MatrixDigest, ModelBank, Points, Section, bank_digest, chunks_of
-from ssaudit.chunk import DEPTHS, PROVE, Part, Settings, audit_chunk
+from ssaudit.chunk import DEPTHS, PROVE, Part, Settings, audit_chunk, named_modes
 from ssaudit.columns import Columns, concatenated
 from ssaudit.criteria import Criteria
 from ssaudit.errors import BankError, SsauditError
@@ -144,17 +144,6 @@ def _for_pandas(columns: Columns) -> dict[str, Any]:
     return {
         name: pd.arrays.BooleanArray(column == 1, column < 0) if column.dtype == np.int8 else column
         for name, column in columns.items()
-    }
-
-
-def named_modes(part: Part) -> Columns:
-    """Columns of a part's modes with the points' names in place of row numbers."""
-    modes = dict(part.modes)
-    row = modes.pop("row")
-    return {
-        "point": part.points["point"][row],
-        "revision": part.points["revision"][row],
-        **modes,
     }
 
 

@@ -73,6 +73,17 @@ class Part:
     missed: NDArray[np.bool_]
 
 
+def named_modes(part: Part) -> Columns:
+    """Columns of a part's modes with the points' names in place of row numbers."""
+    modes = dict(part.modes)
+    row = modes.pop("row")
+    return {
+        "point": part.points["point"][row],
+        "revision": part.points["revision"][row],
+        **modes,
+    }
+
+
 def audit_chunk(
     revision: str,
     section: Section,

@@ -73,6 +73,7 @@ def _parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(metavar="COMMAND", required=True, parser_class=_Parser)
     _add_ingest(commands)
     _add_audit(commands)
+    _add_point(commands)
     _add_drift(commands)
     _add_trend(commands)
     _add_run(commands)
@@ -129,6 +130,19 @@ def _add_audit(commands: Any) -> None:
     )
 
 
+def _add_point(commands: Any) -> None:
+    parser = _add(commands, "point", _point, "explain one point: modes, loops, margins, gains")
+    parser.add_argument("bank", type=Path, metavar="BANK", help="bank that ingest wrote")
+    parser.add_argument("--loop", required=True, type=Path, metavar="L.toml", help="how to close")
+    parser.add_argument("--criteria", type=Path, metavar="C.toml", help="what to judge by")
+    chosen = parser.add_mutually_exclusive_group(required=True)
+    chosen.add_argument("--id", metavar="ID", help="name of the point")
+    chosen.add_argument(
+        "--near", type=_coordinates, metavar="speed=20,mass=95", help="coordinates near it"
+    )
+    _add_json(parser)
+
+
 def _add_drift(commands: Any) -> None:
     parser = _add(commands, "drift", _drift, "compare two runs of a ledger point by point")
     parser.add_argument("ledger", type=Path, metavar="LEDGER", help="the ledger")
@@ -174,6 +188,20 @@ def _add_json(parser: Any) -> None:
     parser.add_argument(
         "--json", metavar="FILE", help="write the findings as JSON; - prints them and nothing else"
     )
+
+
+def _coordinates(text: str) -> dict[str, float]:
+    found = {}
+    for pair in text.split(","):
+        name, equals, number = pair.partition("=")
+        try:
+            value = float(number)
+        except ValueError:
+            value = float("nan")
+        if not (name.strip() and equals and abs(value) < float("inf")):
+            raise argparse.ArgumentTypeError(f"{pair!r} is not NAME=NUMBER")
+        found[name.strip()] = value
+    return found
 
 
 def _natural(text: str) -> int:
@@ -247,6 +275,28 @@ def _audit(options: argparse.Namespace) -> int:
 
         _show(audit_text(report))
     return OK if report.summary.all_ok else NOT_OK
+
+
+def _point(options: argparse.Namespace) -> int:
+    from ssaudit.bank_file import read_bank
+    from ssaudit.criteria import read_criteria
+    from ssaudit.loop.files import files_of_loop, read_loop
+    from ssaudit.point import explain_point
+
+    loop = read_loop(options.loop)
+    criteria = read_criteria(options.criteria) if options.criteria else None
+    _check_outputs((options.bank, *files_of_loop(options.loop)), options.json)
+    with read_bank(options.bank) as bank:
+        report = explain_point(bank, loop, id=options.id, near=options.near, criteria=criteria)
+    if options.json is not None:
+        from ssaudit.report.records import as_json, point_record
+
+        _write_json(as_json(point_record(report)), options.json)
+    if options.json != "-":
+        from ssaudit.report.point_text import point_text
+
+        _show(point_text(report))
+    return OK if report.row["verdict"] == "ok" else NOT_OK
 
 
 def _drift(options: argparse.Namespace) -> int:

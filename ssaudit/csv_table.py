@@ -80,12 +80,18 @@ class CsvWriter:
         except OSError as error:
             raise self._unwritable(error) from error
 
-    def commit(self) -> None:
-        """Put the finished file in its place."""
+    def finish(self) -> None:
+        """Write what remains: what fails for want of space fails here, before other outputs."""
         try:
             if self._writer is not None:
                 self._writer.close()
             self._file.close()
+        except OSError as error:
+            raise self._unwritable(error) from error
+
+    def commit(self) -> None:
+        """Put the finished file in its place."""
+        try:
             mask = os.umask(0)
             os.umask(mask)
             os.chmod(self._temporary, 0o666 & ~mask)

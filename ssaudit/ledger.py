@@ -38,6 +38,11 @@ GROUP_POINTS = 32_768
 # What the commands read of a run.json, besides the counts of verdicts.
 ENTRIES = ("run", "revision", "digest", "ids_given", "units", "max_real", "min_damping")
 COUNTS = ("total", "ok", "short", "lost", "doubt", "void")
+# What the commands read of the tables.
+COLUMNS = {
+    "points": ("point", "verdict", "reason", "max_real", "min_damping"),
+    "modes": ("point", "real", "imag"),
+}
 UNITS = {
     **{name: unit for name, unit in POINT_QUANTITIES.items() if unit},
     **{f"{name}_frequency": "rad/s" for name in POINT_QUANTITIES},
@@ -131,6 +136,9 @@ class LoggedRun:
             table = pq.ParquetFile(path).read()
         except (OSError, ValueError) as error:
             raise LedgerError(f"cannot be read ({error})", where=str(path)) from error
+        for column in COLUMNS[name]:
+            if column not in table.column_names:
+                raise LedgerError(f"is damaged: column {column} is missing", where=str(path))
         frame: pd.DataFrame = table.to_pandas()
         return frame
 

@@ -127,8 +127,10 @@ def stream_audit(
         summary = tally.result()
         about = describe_run(bank, loop, criteria, settings, summary)
         if table is not None:
-            table.commit()
+            table.finish()
         run = writer.commit(about) if writer is not None else logged
+        if table is not None:
+            table.commit()
     return AuditReport(
         summary,
         about,

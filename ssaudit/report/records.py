@@ -2,11 +2,14 @@
 
 import json
 from collections.abc import Mapping
+from dataclasses import fields
 from typing import Any
 
 from ssaudit.criteria import POINT_QUANTITIES
+from ssaudit.distances import SingleLoop
 from ssaudit.drifting import Drift
 from ssaudit.ledger import LoggedRun, finite
+from ssaudit.point import PointReport
 from ssaudit.report.audit_text import participating
 from ssaudit.report.words import CAUTIONS
 from ssaudit.stages import AuditReport
@@ -103,6 +106,70 @@ def _point(point: Mapping[str, Any]) -> dict[str, Any]:
         "missed": [name for name in point["missed"].split("; ") if name],
         **{name: finite(point[name]) for name in (*NUMBERS, *POINT_QUANTITIES) if name in point},
         "top_states": participating(point),
+    }
+
+
+def point_record(report: PointReport) -> dict[str, Any]:
+    """Record one point for ``--json``.
+
+    Parameters
+    ----------
+    report : PointReport
+        The point, explained.
+
+    Returns
+    -------
+    dict
+    """
+    row, gains = report.row, report.gains
+    return {
+        "schema": SCHEMA,
+        **_point(row),
+        "units": report.units,
+        "apart": report.apart,
+        "loop": report.formula,
+        "modes": [
+            {name: _plain(value) for name, value in mode.items() if name not in SHARED}
+            for mode in report.modes
+        ],
+        "loops": [_loop(loop) for loop in report.loops],
+        "stable_gain_factors": None
+        if gains is None
+        else [
+            {"from": finite(low), "to": finite(high)}
+            for low, high in zip(gains.low[0], gains.high[0], strict=True)
+            if low == low
+        ],
+        "gains": [
+            {
+                "input": effect.input,
+                "signal": effect.signal,
+                "gain": finite(effect.gain),
+                "derivative": finite(effect.derivative),
+            }
+            for effect in report.effects
+        ],
+        "cautions": CAUTIONS,
+    }
+
+
+SHARED = ("point", "revision")
+
+
+def _loop(loop: SingleLoop) -> dict[str, Any]:
+    margins, peaks = loop.margins, loop.peaks
+    skipped = ("stable", "confirmed")
+    numbers = {f.name: getattr(margins, f.name)[0] for f in fields(margins)}
+    record = {name: finite(value) for name, value in numbers.items() if name not in skipped}
+    return {
+        "loop": loop.name,
+        "stable": bool(margins.stable[0]),
+        "confirmed": bool(margins.confirmed[0] and loop.gains.confirmed[0]),
+        **record,
+        "gain_factor_low": finite(loop.gains.low[0]),
+        "gain_factor_high": finite(loop.gains.high[0]),
+        "peak_sensitivity": finite(peaks.sensitivity[0]),
+        "peak_complementary": finite(peaks.complementary[0]),
     }
 
 
