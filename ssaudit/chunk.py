@@ -340,7 +340,7 @@ class _Chunk:
         outside = inside.copy()
         lost = np.flatnonzero(judgement.verdict == LOST)
         outside[lost] = UNKNOWN
-        if deep and len(lost) and self.mass is None:
+        if deep and len(lost) and self.mass is None and {"B", "C"} <= set(self.matrices):
             parts = self.parts(lost)
             if self.closed.open is None:
                 parts = {name: M[lost] for name, M in self.matrices.items()} | parts

@@ -96,14 +96,16 @@ def top_states(
     modes, states = factors.shape
     index = np.full((modes, count), -1, dtype=np.int64)
     share = np.full((modes, count), np.nan)
-    left = np.where(np.isnan(factors), -1.0, factors)
-    rows = np.arange(modes)
+    left = factors.copy()
+    left[np.isnan(factors[:, :1]).ravel()] = -1.0
+    flat, rows = left.reshape(-1), np.arange(modes) * states
     for place in range(min(count, states)):
         best = left.argmax(axis=1)
-        found = left[rows, best] > 0
-        index[found, place] = best[found]
-        share[found, place] = left[rows, best][found]
-        left[rows, best] = -1.0
+        largest = flat[rows + best]
+        found = largest > 0
+        index[:, place] = np.where(found, best, -1)
+        share[:, place] = np.where(found, largest, np.nan)
+        flat[rows + best] = -1.0
     return index, share
 
 

@@ -85,7 +85,9 @@ def find_poles(A: NDArray[np.float64]) -> tuple[NDArray[np.complex128], NDArray[
     """
     if A.size == 0:
         return np.zeros(A.shape[:2], dtype=complex), np.zeros(len(A), dtype=bool)
-    (poles,), failed = isolate(lambda stack: (np.linalg.eigvals(stack).astype(complex),), A)
+    (poles,), failed = isolate(
+        lambda stack: (np.asarray(np.linalg.eigvals(stack), dtype=complex),), A
+    )
     return poles, failed
 
 
@@ -125,7 +127,7 @@ def find_modes(
 
     def vectors(stack: NDArray[np.float64]) -> Stacked:
         poles, right = np.linalg.eig(stack)
-        return poles.astype(complex), right.astype(complex)
+        return np.asarray(poles, dtype=complex), np.asarray(right, dtype=complex)
 
     (poles, right), failed = isolate(vectors, A)
     (left,), _ = isolate(lambda stack: (np.linalg.inv(stack),), right)
