@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ssaudit.bank import Matrices, MatrixDigest, ModelBank, Points, Section, bank_digest, chunks_of
-from ssaudit.chunk import DEPTHS, PROVE, Part, Settings, audit_chunk, named_modes
+from ssaudit.chunk import DEPTHS, PROVE, Part, Settings, audit_chunk, named_rows
 from ssaudit.columns import Columns, concatenated
 from ssaudit.criteria import Criteria
 from ssaudit.errors import BankError, SsauditError
@@ -44,6 +44,8 @@ class Audit:
         A row a mode, conjugate pairs once, columns as in the ledger.
     summary : Summary
         Counts, worst points and what they miss.
+    loops : DataFrame
+        A row a single loop of a point at depth margins; empty at other depths.
     ids_given : bool
         Whether the export named its points; otherwise they are numbered.
     """
@@ -51,6 +53,7 @@ class Audit:
     points: "pd.DataFrame"
     modes: "pd.DataFrame"
     summary: Summary
+    loops: "pd.DataFrame"
     ids_given: bool = True
 
 
@@ -114,25 +117,30 @@ def audit(
     import pandas as pd
 
     tally = Tally(bank.revision, criteria, worst)
-    points, modes = [], []
+    points, modes, loops = [], [], []
     for part in audit_parts(
         bank,
         loop,
         criteria,
         depth=depth,
+        real_radius=real_radius,
         prove=prove,
         workers=workers,
         chunk=chunk,
         worst=worst,
     ):
         tally.add(part.points, part.values, part.shortfall, part.missed)
+        tally.add_loops(part.points, part.loops)
         points.append(part.points)
-        modes.append(named_modes(part))
+        modes.append(named_rows(part, part.modes))
+        if part.loops:
+            loops.append(named_rows(part, part.loops))
     # Joined before pandas chooses types, which it would choose otherwise for a part without modes.
     return Audit(
         pd.DataFrame(_for_pandas(concatenated(points))),
         pd.DataFrame(concatenated(modes)),
         tally.result(),
+        pd.DataFrame(concatenated(loops) if loops else {}),
         bank.ids_given,
     )
 

@@ -275,7 +275,7 @@ def chunks_of(
         yield slice(start, stop), section.read(start, stop)
 
 
-def mark_unusable(points: Points, sections: Sequence[Section]) -> Points:
+def mark_unusable(points: Points, sections: Sequence[Section], *, ids_given: bool = True) -> Points:
     """Mark as void the points whose id or place in the envelope is claimed more than once.
 
     Which of the claimants is meant cannot be known, so none of them is judged. Points that are
@@ -287,6 +287,8 @@ def mark_unusable(points: Points, sections: Sequence[Section]) -> Points:
         All points, section by section.
     sections : sequence of Section
         The sections; the same coordinates in two sections are two models, not a duplicate.
+    ids_given : bool
+        Whether the export named its points; numbers that were given to them never recur.
 
     Returns
     -------
@@ -296,7 +298,9 @@ def mark_unusable(points: Points, sections: Sequence[Section]) -> Points:
     void = points.void.copy()
     section_of = np.repeat(np.arange(len(sections)), [len(section) for section in sections])
     place = [section_of, *points.coordinates.values(), *points.tags.values()]
-    claims: list[tuple[str, list[NDArray[Any]]]] = [(DUPLICATE_ID, [points.ids])]
+    claims: list[tuple[str, list[NDArray[Any]]]] = []
+    if ids_given:
+        claims.append((DUPLICATE_ID, [points.ids]))
     if points.coordinates:
         claims.append((DUPLICATE_PLACE, place))
     for reason, columns in claims:
@@ -309,10 +313,12 @@ def mark_unusable(points: Points, sections: Sequence[Section]) -> Points:
 def _times_claimed(columns: Sequence[NDArray[Any]]) -> NDArray[np.int64]:
     """How many rows share the values of each row."""
     # Equal rows have equal hashes, so only rows whose hash recurs need an exact comparison.
-    _, place, times = np.unique(row_hashes(columns), return_inverse=True, return_counts=True)
+    hashes = row_hashes(columns)
+    ordered = np.sort(hashes)
+    again = ordered[1:][ordered[1:] == ordered[:-1]]
     counts: NDArray[np.int64] = np.ones(len(columns[0]), dtype=np.int64)
-    recurring = np.flatnonzero(times[place] > 1)
-    if recurring.size:
+    if again.size:
+        recurring = np.flatnonzero(np.isin(hashes, again))
         counts[recurring] = _times_claimed_exactly([column[recurring] for column in columns])
     return counts
 

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import Matrices, Points, Section
-from ssaudit.columns import Columns, mode_columns, point_columns
+from ssaudit.columns import Columns, loop_columns, mode_columns, point_columns
 from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
 from ssaudit.distances import Distances, find_distances
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
@@ -64,6 +64,8 @@ class Part:
         Worst value of each requirement's quantity, and how far it is beyond the limit.
     missed : (points, requirements) bool
         Which requirements are missed.
+    loops : dict of (loops,) arrays
+        A row a single loop at depth margins, ``row`` as of the modes; empty at other depths.
     """
 
     points: Columns
@@ -71,17 +73,27 @@ class Part:
     values: Floats
     shortfall: Floats
     missed: NDArray[np.bool_]
+    loops: Columns
 
 
-def named_modes(part: Part) -> Columns:
-    """Columns of a part's modes with the points' names in place of row numbers."""
-    modes = dict(part.modes)
-    row = modes.pop("row")
-    return {
-        "point": part.points["point"][row],
-        "revision": part.points["revision"][row],
-        **modes,
-    }
+def named_rows(part: Part, table: Columns) -> Columns:
+    """Columns of a part's modes or loops with the points' names in place of row numbers.
+
+    Parameters
+    ----------
+    part : Part
+        The part.
+    table : dict of arrays
+        Its ``modes`` or its ``loops``.
+
+    Returns
+    -------
+    dict of arrays
+    """
+    columns = dict(table)
+    row = columns.pop("row")
+    of_point = {name: part.points[name][row] for name in ("point", "revision")}
+    return {**of_point, **columns}
 
 
 def audit_chunk(
@@ -151,6 +163,7 @@ def audit_chunk(
         judgement.value,
         judgement.shortfall,
         judgement.missed,
+        loop_columns(distances),
     )
 
 

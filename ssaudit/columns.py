@@ -8,10 +8,16 @@ from numpy.typing import NDArray
 
 from ssaudit.bank import Points
 from ssaudit.criteria import Criteria
+from ssaudit.distances import Distances
 from ssaudit.judging import LOST, VERDICTS, VOID, Judgement, missed_names
 from ssaudit.loop.model import ClosedModels
 from ssaudit.modes.participation import TOP, state_names
-from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_constant
+from ssaudit.modes.quantities import (
+    damping_ratio,
+    natural_frequency,
+    sampled_notes,
+    time_constant,
+)
 from ssaudit.modes.stacked import Modes
 
 Columns = dict[str, NDArray[Any]]
@@ -104,8 +110,51 @@ def mode_columns(closed: ClosedModels, modes: Modes) -> Columns:
         "damping_ratio": damping_ratio(s),
         "time_constant": time_constant(s),
         "modulus": np.full(len(s), np.nan) if modes.z is None else np.abs(modes.z[keep]),
+        "note": np.full(len(s), "", dtype=object)
+        if modes.z is None
+        else sampled_notes(modes.z[keep]),
     }
     if modes.index is not None:
         columns["radius"] = modes.radius[keep]
         columns["top_states"] = state_names(modes.index[keep], closed.states)
     return columns
+
+
+def loop_columns(distances: Distances | None) -> Columns:
+    """Columns of the loops table: a row a single loop of a point, ``row`` the point's row.
+
+    Parameters
+    ----------
+    distances : Distances or None
+        Distances to trouble of the points; None at other depths than margins.
+
+    Returns
+    -------
+    dict of (loops,) arrays
+        Empty when there are none.
+    """
+    if distances is None or not distances.loops:
+        return {}
+    parts = []
+    for loop in distances.loops:
+        margins, gains, peaks = loop.margins, loop.gains, loop.peaks
+        parts.append(
+            {
+                "row": distances.rows,
+                "loop": np.full(len(distances.rows), loop.name, dtype=object),
+                "gain_margin_low_db": margins.gain_low_db,
+                "gain_margin_high_db": margins.gain_high_db,
+                "phase_margin_deg": margins.phase_deg,
+                "phase_margin_frequency": margins.phase_frequency,
+                "delay_margin_s": margins.delay_s,
+                "gain_factor_low": gains.low,
+                "gain_factor_high": gains.high,
+                "gain_factor_low_frequency": gains.low_frequency,
+                "gain_factor_high_frequency": gains.high_frequency,
+                "peak_sensitivity": peaks.sensitivity,
+                "peak_complementary": peaks.complementary,
+            }
+        )
+    joined = concatenated(parts)
+    order = np.argsort(joined["row"], kind="stable")
+    return {name: column[order] for name, column in joined.items()}

@@ -64,13 +64,16 @@ class Distances:
     unknown : dict of (points,) bool
         Where the numbers do not decide a quantity.
     loops : tuple of SingleLoop
-        Every single loop.
+        Every single loop, at the points that have distances.
+    rows : (k,) int
+        Which points of the chunk these are.
     """
 
     quantities: dict[str, Floats]
     places: dict[str, NDArray[Any]]
     unknown: dict[str, NDArray[np.bool_]]
     loops: tuple[SingleLoop, ...]
+    rows: NDArray[np.int64]
 
     def spread(self, rows: NDArray[np.int64], count: int) -> "Distances":
         """Spread these points over a chunk; elsewhere nothing is defined."""
@@ -88,6 +91,7 @@ class Distances:
             },
             {name: over(values, False) for name, values in self.unknown.items()},
             self.loops,
+            rows,
         )
 
 
@@ -120,39 +124,39 @@ def find_distances(
         Of models that come closed the radii alone.
     """
     if not len(closed.A):
-        return _nothing(0)
+        return _collect((), _blank(0), 0)
     radii = _radii(closed.A, closed.dt, real_radius)
     if closed.K is None:
-        blank = np.full(len(closed.A), np.nan), np.full(len(closed.A), np.nan)
-        found = dict.fromkeys(WHOLE, (*blank, np.ones(len(closed.A), dtype=bool)))
-        return _collect((), found | radii, len(closed.A))
+        return _collect((), {**_blank(len(closed.A)), **radii}, len(closed.A))
     opened = loop.open(section, matrices) if closed.open is None else closed.open
     sign = SIGNS[loop.sign]
-    inputs, signals = section.inputs, loop.signals(section)
+    inputs, signals = loop.channels(section)
     K = np.broadcast_to(closed.K, (len(closed.A), *closed.K.shape[1:]))
-    loops = []
-    for side, names, used in (
-        ("input", inputs, np.abs(K).max(axis=(0, 2), initial=0.0)),
-        ("signal", signals, np.abs(K).max(axis=(0, 1), initial=0.0)),
-    ):
-        for channel, name in enumerate(names):
-            if used[channel] > 0:
-                loops.append(_single(loop, section, matrices, closed, K, sign, side, channel, name))
-    at_inputs = break_loop(opened, K, sign, inputs=range(len(inputs)))
-    at_signals = break_loop(opened, K, sign, signals=range(len(signals)))
-    both = break_loop(opened, K, sign, inputs=range(len(inputs)), signals=range(len(signals)))
+    loops = tuple(
+        _single(loop, section, matrices, closed, K, sign, side, channel, names[channel])
+        for side, names, channels in (
+            ("input", section.inputs, inputs),
+            ("signal", loop.signals(section), signals),
+        )
+        for channel in channels
+    )
+    if not inputs:
+        return _collect((), {**_blank(len(closed.A)), **radii}, len(closed.A))
+    at_inputs = break_loop(opened, K, sign, inputs=inputs)
+    at_signals = break_loop(opened, K, sign, signals=signals)
+    both = break_loop(opened, K, sign, inputs=inputs, signals=signals)
     found = dict(radii)
     factor = find_gain_range(*_matrices(at_inputs), closed.dt)
     decided = factor.confirmed | ~factor.stable
     found["gain_factor_low"] = (factor.low, factor.low_frequency, decided)
     found["gain_factor_high"] = (factor.high, factor.high_frequency, decided)
     for name, broken in (("input", at_inputs), ("output", at_signals), ("both", both)):
-        disk = find_disk_margin(*_matrices(_used(broken)), closed.dt)
+        disk = find_disk_margin(*_matrices(broken), closed.dt)
         decided = disk.confirmed | ~disk.stable
         found[f"disk_margin_{name}"] = (disk.alpha, disk.frequency, decided)
     disks = [found[f"disk_margin_{name}"] for name in ("input", "output", "both")]
     found["disk_margin"] = _least(disks)
-    return _collect(tuple(loops), found, len(closed.A))
+    return _collect(loops, found, len(closed.A))
 
 
 def _least(
@@ -167,30 +171,17 @@ def _least(
     return values[least, rows], frequencies[least, rows], decided
 
 
-def _nothing(count: int) -> Distances:
-    """No distances, under all the names."""
-    blank = np.full(count, np.nan), np.full(count, np.nan), np.ones(count, dtype=bool)
-    return _collect((), dict.fromkeys(WHOLE, blank), count)
-
-
 Found = dict[str, tuple[Floats, Floats, NDArray[np.bool_]]]
+
+
+def _blank(count: int) -> Found:
+    """Return nothing, under all the names of the whole loop."""
+    nothing = np.full(count, np.nan)
+    return dict.fromkeys(WHOLE, (nothing, nothing, np.ones(count, dtype=bool)))
 
 
 def _matrices(system: StateSpace) -> tuple[Floats, Floats, Floats, Floats]:
     return system.A, system.B, system.C, system.D
-
-
-def _used(broken: StateSpace) -> StateSpace:
-    """Leave out channels that nothing feeds back at any point: they cannot destabilise."""
-    if broken.D.shape[-1] <= 1:
-        return broken
-    rows = np.abs(broken.C).max(axis=(0, 2)) + np.abs(broken.D).max(axis=(0, 2))
-    columns = np.abs(broken.B).max(axis=(0, 1)) + np.abs(broken.D).max(axis=(0, 1))
-    keep = np.flatnonzero((rows > 0) & (columns > 0))
-    if not len(keep):
-        keep = np.array([0])
-    D = broken.D[:, keep][:, :, keep]
-    return StateSpace(broken.A, broken.B[:, :, keep], broken.C[:, keep], D)
 
 
 def _radii(A: Floats, dt: float, real: bool) -> Found:
@@ -261,7 +252,7 @@ def _collect(loops: Sequence[SingleLoop], found: Found, count: int) -> Distances
         places[f"{name}_frequency"] = frequencies[worst, rows]
         undecided = [~decided for _, _, decided in table]
         unknown[name] = np.any(undecided, axis=0) if table else np.zeros(count, dtype=bool)
-    return Distances(quantities, places, unknown, tuple(loops))
+    return Distances(quantities, places, unknown, tuple(loops), np.arange(count))
 
 
 # Quantities of the whole closed loop.

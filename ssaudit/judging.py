@@ -19,6 +19,7 @@ DISTANCE_TOLERANCE = 1e-6
 # From the best to the worst for sorting; a void point could not be judged.
 VERDICTS = ("ok", "void", "short", "doubt", "lost")
 OK, VOID, SHORT, DOUBT, LOST = range(5)
+ON_AXIS, ON_CIRCLE = "not stable: a pole on the axis", "not stable: a pole on the unit circle"
 
 
 @dataclass(frozen=True, eq=False)
@@ -199,7 +200,8 @@ def _judge_stability(
     # In doubt it is the pole that may be furthest to the right; of a pair, the first.
     worst[doubt] = _furthest_right(np.where(modes.s.imag < 0, -np.inf, high))[doubt]
     verdict[lost], verdict[doubt] = LOST, DOUBT
-    reason[lost] = _lost_reasons(surely[lost].sum(axis=1), modes.z is not None)
+    beyond = surely[lost] & (modes.s.real[lost] > 0)
+    reason[lost] = _lost_reasons(beyond.sum(axis=1), modes.z is not None)
     rows = np.flatnonzero(doubt)
     at = modes.s.real[rows, worst[rows]]
     off = modes.radius[rows, worst[rows]]
@@ -209,11 +211,11 @@ def _judge_stability(
 
 def _lost_reasons(counts: NDArray[np.int64], sampled: bool) -> NDArray[np.object_]:
     place = "outside the unit circle" if sampled else "right of the axis"
-    kinds = np.array(
-        [f"not stable: {k} pole{'s' * (k > 1)} {place}" for k in range(counts.max(initial=0) + 1)],
-        dtype=object,
-    )
-    return np.asarray(kinds[counts])
+    kinds = [
+        f"not stable: {k} pole{'s' * (k > 1)} {place}" for k in range(counts.max(initial=0) + 1)
+    ]
+    kinds[0] = ON_CIRCLE if sampled else ON_AXIS
+    return np.asarray(np.array(kinds, dtype=object)[counts])
 
 
 @dataclass(frozen=True, eq=False)

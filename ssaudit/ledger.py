@@ -52,6 +52,8 @@ UNITS = {
     "radius": "1/s",
     "natural_frequency": "rad/s",
     "time_constant": "s",
+    "gain_margin_low_db": "dB",
+    "gain_margin_high_db": "dB",
 }
 
 
@@ -127,6 +129,11 @@ class LoggedRun:
     def modes(self) -> "pd.DataFrame":
         """The modes table."""
         return self._read("modes")
+
+    @cached_property
+    def loops(self) -> "pd.DataFrame":
+        """The loops table of a run at depth margins."""
+        return self._read("loops")
 
     def _read(self, name: str) -> "pd.DataFrame":
         import pyarrow.parquet as pq
@@ -291,17 +298,19 @@ class RunWriter:
             return
         parts, self._waiting = self._waiting, []
         points = concatenated([part.points for part in parts])
-        starts = np.cumsum([0, *(len(part.values) for part in parts[:-1])])
-        modes = concatenated(
-            [
-                {**part.modes, "row": part.modes["row"] + start}
-                for part, start in zip(parts, starts, strict=True)
-            ]
-        )
-        row = modes.pop("row")
         self._write("points", points)
-        of_point = {"point": (row, points["point"]), "revision": (row, points["revision"])}
-        self._write("modes", {**of_point, **modes})
+        starts = np.cumsum([0, *(len(part.values) for part in parts[:-1])])
+        for name in ("modes", "loops"):
+            tables = [
+                {**table, "row": table["row"] + start}
+                for part, start in zip(parts, starts, strict=True)
+                if (table := getattr(part, name))
+            ]
+            if tables:
+                columns = concatenated(tables)
+                row = columns.pop("row")
+                of_point = {key: (row, points[key]) for key in ("point", "revision")}
+                self._write(name, {**of_point, **columns})
 
     def _write(self, name: str, columns: Mapping[str, Any]) -> None:
         import pyarrow as pa

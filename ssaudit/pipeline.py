@@ -12,6 +12,8 @@ from ssaudit.chunk import DEPTHS
 from ssaudit.criteria import read_criteria
 from ssaudit.errors import LedgerError, PipelineError
 from ssaudit.intake.ingest import Intake, ingest, no_progress
+from ssaudit.intake.layout import read_layout
+from ssaudit.intake.sources import find_files
 from ssaudit.ledger import find_run
 from ssaudit.loop.files import read_loop
 from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
@@ -167,8 +169,10 @@ def run_pipeline(
         At the stage that cannot be run.
     """
     pipeline = read_pipeline(path)
-    # Loops and criteria are read first: a slip in the last of them should not cost hours.
+    # All that is cheap to look at comes first: a slip in the last revision should not cost hours.
     stated = [(read_loop(r.loop), read_criteria(r.criteria)) for r in pipeline.revisions]
+    for revision in pipeline.revisions:
+        find_files(revision.sources, read_layout(revision.layout) if revision.layout else None)
     _check_comparisons(pipeline, str(path))
     audited: dict[str, str] = {}
     for revision, (loop, criteria) in zip(pipeline.revisions, stated, strict=True):

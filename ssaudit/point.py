@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import ModelBank, Points, Section
-from ssaudit.chunk import Part, Settings, audit_chunk, named_modes
+from ssaudit.chunk import Part, Settings, audit_chunk, named_rows
 from ssaudit.criteria import Criteria
 from ssaudit.distances import Distances, SingleLoop, find_distances
 from ssaudit.errors import SsauditError
@@ -199,7 +199,8 @@ def find_point(
             valid = nearest(name, bank.points.coordinates)
             raise SsauditError(f"unknown coordinate {name!r}", where=bank.name, do=valid)
         column = bank.points.coordinates[name]
-        spread = np.nanmax(column) - np.nanmin(column) if np.isfinite(column).any() else 0.0
+        known = column[np.isfinite(column)]
+        spread = np.ptp(known) if len(known) else 0.0
         distance += ((column - value) / (spread or 1.0)) ** 2
     # Of equally near points a usable one is wanted first.
     distance = np.where(np.isfinite(distance), distance, np.inf)
@@ -223,7 +224,7 @@ def section_of(bank: ModelBank, place: int) -> tuple[Section, int]:
 
 
 def _modes(part: Part) -> list[dict[str, Any]]:
-    columns = named_modes(part)
+    columns = named_rows(part, part.modes)
     order = np.argsort(columns["damping_ratio"], kind="stable")
     return [{name: column[i] for name, column in columns.items()} for i in order]
 
@@ -255,8 +256,8 @@ def _effects(
     poles, right, left, _ = find_modes(closed.A)
     moves = pole_derivatives(opened.B, opened.C, opened.D, K, SIGNS[loop.sign], right, left)
     derivatives = damping_derivatives(poles, moves, closed.dt)[0]
-    s = np.log(poles[0]) / closed.dt if closed.dt > 0 else poles[0]
     with np.errstate(invalid="ignore", divide="ignore"):
+        s = np.log(poles[0]) / closed.dt if closed.dt > 0 else poles[0]
         ratio = -s.real / np.abs(s)
     if np.isnan(ratio).all():
         return ()

@@ -7,9 +7,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.criteria import CROSS_CHECK, STABILITY
-from ssaudit.judging import DOUBT, LOST, VOID, Judgement
+from ssaudit.judging import DOUBT, LOST, ON_AXIS, ON_CIRCLE, VOID, Judgement
 from ssaudit.modes.evidence import DISAGREEMENTS, GROUNDS, cross_check, exact_not_stable
-from ssaudit.modes.neutral import neutral_states
+from ssaudit.modes.neutral import grows_at_rest, neutral_states
 from ssaudit.modes.stacked import Modes
 
 Floats = NDArray[np.float64]
@@ -58,6 +58,9 @@ def settle(
         if grounds:
             verdict[row], about[row] = LOST, ""
             reason[row] = f"not stable: {GROUNDS[grounds[0]]}"
+    at_rest = np.flatnonzero(np.isin(reason, (ON_AXIS, ON_CIRCLE)) | (unsure & (verdict == LOST)))
+    growing = at_rest[grows_at_rest(A[at_rest], sampled)]
+    reason[growing] = f"not stable: a repeated pole at {int(sampled)}, which grows as t"
     failed = cross_check(A, poles, judged & ~lost & ~unsure, lost, sampled=sampled)
     for row in np.flatnonzero(judged & (failed != "")):
         verdict[row], about[row] = DOUBT, CROSS_CHECK

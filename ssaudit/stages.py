@@ -120,6 +120,7 @@ def stream_audit(
             progress=progress,
         ):
             tally.add(part.points, part.values, part.shortfall, part.missed)
+            tally.add_loops(part.points, part.loops)
             if writer is not None:
                 writer.append(part)
             if table is not None:

@@ -78,6 +78,42 @@ class Nearest:
     undefined: int
 
 
+@dataclass(frozen=True)
+class CommonRange:
+    """Range of one gain factor on a loop that is stable at every point at which it is defined.
+
+    Attributes
+    ----------
+    loop : str
+        The loop; "" for one factor on all gains.
+    low, high : float
+        Ends of the range.
+    low_point, high_point : str
+        The points that set them; "" where there is no end.
+    """
+
+    loop: str
+    low: float
+    high: float
+    low_point: str
+    high_point: str
+
+    def narrowed(
+        self, low: NDArray[np.float64], high: NDArray[np.float64], points: NDArray[Any]
+    ) -> "CommonRange":
+        """Return the range that also holds at some more points."""
+        found = self
+        if not np.isnan(low).all():
+            row = int(np.nanargmax(low))
+            if low[row] > found.low:
+                found = replace(found, low=float(low[row]), low_point=str(points[row]))
+        if not np.isnan(high).all():
+            row = int(np.nanargmin(high))
+            if high[row] < found.high:
+                found = replace(found, high=float(high[row]), high_point=str(points[row]))
+        return found
+
+
 # Margins of which the greatest value is the worst; of the others the least.
 GREATEST_IS_WORST = ("gain_factor_low", "peak_sensitivity", "peak_complementary")
 
@@ -108,6 +144,9 @@ class Summary:
         Points by outcome of their proof: stable, unstable, open; empty when none was asked for.
     nearest : tuple of Nearest
         The worst of each margin; empty unless depth was margins.
+    ranges : tuple of CommonRange
+        Common stable range of one factor on all gains, then on each loop; empty unless depth was
+        margins.
     max_real, min_damping : float
         Worst of all judged points [1/s; no unit]; NaN when there is none.
     """
@@ -122,6 +161,7 @@ class Summary:
     tolerated: int
     proofs: Mapping[str, int]
     nearest: tuple[Nearest, ...]
+    ranges: tuple[CommonRange, ...]
     max_real: float
     min_damping: float
 
@@ -163,10 +203,34 @@ class Tally:
         self._between: list[dict[str, tuple[float, float]]] = [{} for _ in range(size)]
         self._all_between: dict[str, tuple[float, float]] = {}
         self._held = self._tolerated = 0
+        self._ranges: dict[str, CommonRange] = {}
         self._nearest: dict[str, Nearest] = {}
         self._proofs: Counter[str] = Counter()
         self._extremes = (np.nan, np.nan)
         self._seen = 0
+
+    def add_loops(self, points: Columns, loops: Columns) -> None:
+        """Take in the single loops of a chunk.
+
+        Parameters
+        ----------
+        points, loops : dict of arrays
+            Columns of the points table and of the loops table.
+        """
+        if "gain_factor_low" not in points:
+            return
+        names = points["point"]
+        self._narrow("", points["gain_factor_low"], points["gain_factor_high"], names)
+        for loop in dict.fromkeys(loops["loop"]) if loops else ():
+            rows = loops["loop"] == loop
+            ends = (loops["gain_factor_low"][rows], loops["gain_factor_high"][rows])
+            self._narrow(loop, *ends, names[loops["row"][rows]])
+
+    def _narrow(
+        self, loop: str, low: NDArray[np.float64], high: NDArray[np.float64], names: NDArray[Any]
+    ) -> None:
+        before = self._ranges.get(loop) or CommonRange(loop, -np.inf, np.inf, "", "")
+        self._ranges[loop] = before.narrowed(low, high, names)
 
     def add(
         self,
@@ -302,6 +366,7 @@ class Tally:
             self._tolerated,
             dict(self._proofs),
             tuple(self._nearest.values()),
+            tuple(self._ranges.values()),
             *self._extremes,
         )
 

@@ -88,14 +88,15 @@ class TestTables:
         modes = pd.read_parquet(log(ledger, bank, NONE, NOTHING).run.path / "modes.parquet")
         assert (modes["imag"] >= 0).all()
         pair, real = (modes[modes["point"] == name] for name in ("pair", "real"))
-        assert sorted(zip(pair["real"], pair["imag"], strict=True)) == [(-7.0, 0.0), (-1.0, 2.0)]
+        assert sorted(pair["imag"]) == pytest.approx([0.0, 2.0], rel=1e-15)
+        assert sorted(pair["real"]) == pytest.approx([-7.0, -1.0], rel=1e-15)
         assert sorted(zip(real["real"], real["imag"], strict=True)) == [
             (-4.0, 0.0), (-2.0, 0.0), (-1.0, 0.0)
         ]  # fmt: skip
-        row = pair[pair["imag"] == 2.0].iloc[0]
+        row = pair[pair["imag"] > 0].iloc[0]
         assert row["natural_frequency"] == pytest.approx(5**0.5, rel=1e-15)
         assert row["damping_ratio"] == pytest.approx(5**-0.5, rel=1e-15)
-        assert row["time_constant"] == 1.0
+        assert row["time_constant"] == pytest.approx(1.0, rel=1e-15)
         assert row["revision"] == "A"
 
     def test_pyarrow_finds_types_and_units(self, bank, ledger):
@@ -352,7 +353,7 @@ class TestWhole:
         for method in ("write_table", "close"):
             with monkeypatch.context() as patched:
                 patched.setattr(pyarrow.parquet.ParquetWriter, method, full)
-                with pytest.raises(LedgerError, match="cannot be written to .No space left") as e:
+                with pytest.raises(LedgerError, match=r"cannot be written to .*No space left") as e:
                     log(ledger, bank)
             assert str(e.value).startswith(str(ledger))
             assert not ledger.exists()

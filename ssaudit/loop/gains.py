@@ -82,6 +82,11 @@ class ConstantGain:
         """Coordinates that the gain varies with: none."""
         return ()
 
+    @property
+    def largest(self) -> NDArray[np.float64]:
+        """Largest size of each gain anywhere, (inputs, signals)."""
+        return np.asarray(np.abs(self.matrix))
+
     def at(self, coordinates: Coordinates, count: int) -> GainsAtPoints:
         """Gains at ``count`` points: everywhere the same."""
         return GainsAtPoints(
@@ -154,6 +159,12 @@ class GainSchedule:
             if not (np.all(np.isfinite(values)) and np.all(np.diff(values) > 0)):
                 raise LoopError(f"the breakpoints of {name} do not ascend")
         _check_finite(gains.reshape(-1, *gains.shape[-2:]), "the gain schedule")
+
+    @property
+    def largest(self) -> NDArray[np.float64]:
+        """Largest size of each gain anywhere, (inputs, signals)."""
+        flat = np.abs(self.gains).reshape(-1, len(self.inputs), len(self.signals))
+        return np.asarray(flat.max(axis=0))
 
     def at(self, coordinates: Coordinates, count: int) -> GainsAtPoints:
         """Gains at some points.

@@ -368,6 +368,31 @@ class Loop:
                 return f"the compensator's state {name!r} has the name of an input or a signal"
         return ""
 
+    def channels(self, section: Section) -> tuple[list[int], list[int]]:
+        """Numbers of the inputs that some gain drives, and of the signals that some gain uses.
+
+        A compensator's own states are not among them.
+
+        Parameters
+        ----------
+        section : Section
+            Names of the section.
+
+        Returns
+        -------
+        inputs, signals : list of int
+        """
+        if self.gain is None:
+            return [], []
+        signals = self.signals(section)
+        names = (*section.inputs, *self.compensator), (*signals, *self.compensator)
+        largest = arrange(self.gain.largest[np.newaxis], self.gain, *names)[0]
+        used = [np.flatnonzero(largest.max(axis=axis, initial=0.0) > 0) for axis in (1, 0)]
+        return (
+            [int(i) for i in used[0] if i < len(section.inputs)],
+            [int(i) for i in used[1] if i < len(signals)],
+        )
+
     def errors(self, section: Section, matrices: Matrices, K: Floats | None) -> dict[str, Floats]:
         """How far the entries of matrices and gains may be off, as the user states it.
 

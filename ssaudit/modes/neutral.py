@@ -40,11 +40,35 @@ def neutral_states(
     columns = A[:, :, named]
     if sampled:
         columns = columns - np.eye(A.shape[1])[:, named]
-    depends = columns != 0
-    # Each round finds at least one more state of a chain, or ends.
-    for _ in named:
-        free = ~(depends & ~found[:, :, np.newaxis]).any(axis=1)
-        if np.array_equal(free, found[:, named]):
-            break
-        found[:, named] = free
+    found[:, named] = ~columns.any(axis=1)
     return found
+
+
+def grows_at_rest(A: NDArray[np.float64], sampled: bool) -> NDArray[np.bool_]:
+    """Find models in which a sum feeds another sum, so that an offset makes one of them grow as t.
+
+    A state whose column is zero has a pole at 0 (a pole at 1, when sampled, of a column of A - I).
+    Another state whose column has entries only in the rows of such states depends on nothing else
+    either: both poles are the same, and the second state drives the first.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        Closed-loop state matrices.
+    sampled : bool
+        Whether the models are sampled.
+
+    Returns
+    -------
+    (points,) bool
+        Where such a pair is plain from the zeros of A; elsewhere nothing is said.
+
+    Examples
+    --------
+    >>> grows_at_rest(np.array([[[0.0, 1.0], [0.0, 0.0]], [[0.0, 0.0], [0.0, 0.0]]]), False)
+    array([ True, False])
+    """
+    entries = (A - np.eye(A.shape[1]) if sampled else A) != 0
+    sums = ~entries.any(axis=1)
+    elsewhere = (entries & ~sums[:, :, np.newaxis]).any(axis=1)
+    return np.asarray((~sums & ~elsewhere).any(axis=1))

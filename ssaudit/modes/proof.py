@@ -145,7 +145,7 @@ def prove_stability(
     K : (inputs, signals) float or None
         Gains; None: A is the closed loop already.
     E : (n, n) float, optional
-        Left-hand matrix of a descriptor model E x' = A x + B u, taken exactly.
+        Left-hand matrix of a descriptor model E x' = A x + B u.
     sign : int
         σ: -1 for u = -K y, +1 for u = +K y.
     feed : {"states", "outputs"}
@@ -154,8 +154,9 @@ def prove_stability(
         Sampling time [s]; 0: continuous.
     digits : int, optional
         Significant digits to which A, B, C and D were written; None: exact.
-    errors : mapping of "A", "B", "C", "D", "K" to arrays, optional
-        Absolute uncertainty of every entry, added to that from `digits`.
+    errors : mapping of "A", "B", "C", "D", "K", "E" to arrays, optional
+        Absolute uncertainty of every entry, added to that from `digits`; to that of E nothing is
+        added.
 
     Returns
     -------
@@ -196,7 +197,8 @@ def prove_stability(
     spread = {name: _uncertainty(name, M, digits, errors) for name, M in parts.items()}
     if not all(np.isfinite(M).all() for M in (*parts.values(), *spread.values())):
         return Proof("open", NOT_FINITE)
-    if not any(M.any() for M in spread.values()):
+    mass_spread = np.asarray((errors or {}).get("E", 0.0))
+    if not any(M.any() for M in (*spread.values(), mass_spread)):
         return _exact_outcome(flint, parts, E, sign, dt)
     if E is not None:
         return Proof("open", DESCRIPTOR_BOX)

@@ -98,3 +98,28 @@ def time_constant(s: NDArray[np.complex128]) -> NDArray[np.float64]:
     """
     with np.errstate(divide="ignore"):
         return np.where(s.real == 0, np.inf, -1.0 / s.real)
+
+
+def sampled_notes(z: NDArray[np.complex128]) -> NDArray[np.object_]:
+    """Name the poles of sampled models that have no continuous counterpart.
+
+    Parameters
+    ----------
+    z : (...) complex
+        Poles of sampled models.
+
+    Returns
+    -------
+    (...) object
+        "gone within a sample" for z = 0, "half the sampling rate" for a negative real z (it turns
+        its sign every sample), else "".
+
+    Examples
+    --------
+    >>> sampled_notes(np.array([0.0, -0.5, 0.5 + 0.1j])).tolist()
+    ['gone within a sample', 'half the sampling rate', '']
+    """
+    notes = np.full(z.shape, "", dtype=object)
+    notes[z == 0] = "gone within a sample"
+    notes[(z.imag == 0) & (z.real < 0)] = "half the sampling rate"
+    return notes

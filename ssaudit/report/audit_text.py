@@ -166,11 +166,14 @@ def _margins(summary: Summary) -> list[Text]:
                 ]
             )
     lines = [Text(), *aligned(["worst margins", "", "at point", "rad/s", "loop"], "lrlrl", rows)]
-    low, high = found.get("gain_factor_low"), found.get("gain_factor_high")
-    if low is not None and high is not None:
-        text = f"one factor on all gains: stable from {number(low.value, 3)} to "
-        text += f"{number(high.value, 3)} at every stable point"
-        lines.append(one_line(text))
+    for common in summary.ranges[:1]:
+        ends = [
+            f"{number(value, 3)}" + (f" (set at {shortened(point)})" if point else "")
+            for value, point in ((common.low, common.low_point), (common.high, common.high_point))
+        ]
+        lines.append(
+            one_line(f"one factor on all gains, at every stable point: {ends[0]} to {ends[1]}")
+        )
     return lines
 
 
@@ -199,13 +202,14 @@ def _void(summary: Summary) -> list[Text]:
         lines.append(one_line(f"void at {rest}, for other reasons: see the ledger or --csv"))
     for line in lines:
         line.no_wrap, line.overflow = True, "ellipsis"
-    return [Text(), *lines] if lines else []
+    return lines
 
 
 def _provenance(report: AuditReport) -> list[Text]:
     about, held = report.about, report.summary.held
     sources = len(about["sources"])
     depth = about["settings"]["depth"]
+    # Paths stand last: they may be long, and the edge of the screen cuts off what does not fit.
     rows = [
         [
             "bank",
@@ -214,13 +218,15 @@ def _provenance(report: AuditReport) -> list[Text]:
         ],
         [
             "loop",
-            f"{report.loop}, {report.formula}"
-            + (f", edge gains held at {held} points beyond the table" if held else ""),
+            report.formula
+            + (f", edge gains held at {held} points beyond the table" if held else "")
+            + f", {report.loop}",
         ],
         [
             "criteria",
-            f"{report.criteria}, depth {depth}"
-            + (" (conditioning was not examined)" if depth == "poles" else ""),
+            f"depth {depth}"
+            + (" (conditioning was not examined)" if depth == "poles" else "")
+            + f", {report.criteria}",
         ],
     ]
     if report.run is not None:

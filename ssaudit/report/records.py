@@ -78,6 +78,16 @@ def audit_record(report: AuditReport) -> dict[str, Any]:
             }
             for nearest in summary.nearest
         ],
+        "stable_gain_factors": [
+            {
+                "loop": common.loop or "all gains",
+                "from": finite(common.low),
+                "to": finite(common.high),
+                "from_point": common.low_point or None,
+                "to_point": common.high_point or None,
+            }
+            for common in summary.ranges
+        ],
         "held": summary.held,
         "tolerated": summary.tolerated,
         "proofs": summary.proofs,

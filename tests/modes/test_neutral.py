@@ -7,17 +7,25 @@ import pytest
 from numpy.typing import NDArray
 
 import ssaudit
-from ssaudit.modes.neutral import neutral_states
+from ssaudit.modes.neutral import grows_at_rest, neutral_states
 
 # Yaw rate, heading, cross-track position: r' = -r, heading' = r, position' = 5 heading.
 SHIP = np.array([[-1.0, 0.0, 0.0], [1.0, 0.0, 0.0], [0.0, 5.0, 0.0]])
 NAMES = ["yaw_rate", "heading", "position"]
 
 
-def verdict(A: Any, neutral: tuple[str, ...], dt: float = 0.0) -> str:
+def audited(A: Any, neutral: tuple[str, ...], dt: float) -> Any:
     bank = ssaudit.build_bank([A], revision="A", states=NAMES[: len(A)], dt=dt)
-    found = ssaudit.audit(bank, ssaudit.Loop("", None, "none"), ssaudit.Criteria((), neutral))
-    return str(found.points["verdict"][0])
+    loop, criteria = ssaudit.Loop("", None, "none"), ssaudit.Criteria((), neutral)
+    return ssaudit.audit(bank, loop, criteria).points.iloc[0]
+
+
+def verdict(A: Any, neutral: tuple[str, ...], dt: float = 0.0) -> str:
+    return str(audited(A, neutral, dt)["verdict"])
+
+
+def reason(A: Any, neutral: tuple[str, ...], dt: float = 0.0) -> str:
+    return str(audited(A, neutral, dt)["reason"])
 
 
 def found(A: NDArray[np.float64], named: list[int], sampled: bool = False) -> list[bool]:
@@ -44,10 +52,16 @@ def test_state_that_is_not_named_is_not_exempt() -> None:
     assert found(SHIP[:2, :2], [0]) == [False, False]
 
 
-def test_position_that_depends_on_a_neutral_heading_alone() -> None:
-    """Both only sum up; what depends on the heading is itself neutral."""
-    assert found(SHIP, [1, 2]) == [False, True, True]
-    assert verdict(SHIP, ("heading", "position")) == "ok"
+def test_position_that_depends_on_a_neutral_heading_makes_the_heading_count() -> None:
+    """An offset of heading makes the position grow as t: a repeated pole at 0, not a simple one."""
+    assert found(SHIP, [1, 2]) == [False, False, True]
+    assert verdict(SHIP, ("heading", "position")) == "lost"
+    assert "grows as t" in reason(SHIP, ("heading", "position"))
+    assert grows_at_rest(SHIP[np.newaxis], sampled=False).tolist() == [True]
+    apart = SHIP.copy()
+    apart[2, 1] = 0.0
+    assert grows_at_rest(apart[np.newaxis], sampled=False).tolist() == [False]
+    assert verdict(apart, ("heading", "position")) == "ok"
 
 
 def test_heading_stays_when_only_it_is_named_and_a_position_depends_on_it() -> None:
@@ -76,7 +90,8 @@ def test_sampled_sum_is_neutral() -> None:
     assert verdict(A, ("heading",), dt=0.1) == "ok"
     assert verdict(A, (), dt=0.1) in ("lost", "doubt")
     chain = np.array([[0.5, 0.0, 0.0], [0.1, 1.0, 0.0], [0.0, 0.5, 1.0]])
-    assert found(chain, [1, 2], sampled=True) == [False, True, True]
+    assert found(chain, [1, 2], sampled=True) == [False, False, True]
+    assert "at 1, which grows as t" in reason(chain, ("heading", "position"), dt=0.1)
 
 
 def test_points_are_looked_at_one_by_one() -> None:

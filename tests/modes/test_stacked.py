@@ -100,3 +100,17 @@ def test_shares_are_the_largest_participation_factors() -> None:
         place = [np.argmin(np.abs(poles - pole)) for pole in modes.s[point, first[point]]]
         expected = -np.sort(-factors[place], axis=1)[:, :3]
         np.testing.assert_allclose(modes.share[point, first[point]], expected, rtol=1e-9)
+
+
+@pytest.mark.parametrize(("order", "pole"), [(3, 0.999), (4, 0.99), (6, 0.95)])
+def test_repeated_sampled_poles_near_the_circle_get_the_radii_that_decide(
+    order: int, pole: float
+) -> None:
+    """The dearer bound on the radii is used where the unit circle, not the axis, is in reach."""
+    companion = np.eye(order, k=-1)
+    companion[0] = -np.poly([pole] * order)[1:]
+    modes, _ = find_usable_modes(companion[None], np.array([True]), None, dt=0.1)
+    assert modes.z is not None
+    assert modes.z_radius is not None
+    assert (np.abs(modes.z) + modes.z_radius < 1).all()
+    assert (np.abs(modes.z - pole) <= modes.z_radius).all()
