@@ -24,7 +24,10 @@ def folder(tmp_path, monkeypatch):
 
 def write_files(folder: Path) -> None:
     exec(blocks("python")[0], {})
-    loop, schedule, criteria = blocks("toml")
+    loop, schedule, criteria, parts, compensator, uncertain = blocks("toml")
+    gainless = loop.split("[gain]")[0]
+    (folder / "parts.toml").write_text(loop + parts + uncertain)
+    (folder / "computer.toml").write_text(gainless + compensator)
     (folder / "loop.toml").write_text(loop)
     (folder / "criteria.toml").write_text(criteria)
     head = 'sign = "negative"\nfeed = "states"\n'
@@ -33,7 +36,7 @@ def write_files(folder: Path) -> None:
     (folder / "gains.csv").write_text(table)
 
 
-@pytest.mark.parametrize("loop", ["loop.toml", "scheduled.toml"])
+@pytest.mark.parametrize("loop", ["loop.toml", "scheduled.toml", "parts.toml", "computer.toml"])
 def test_own_models_go_from_export_to_ledger(folder, capsys, loop):
     write_files(folder)
     commands = [
@@ -70,7 +73,7 @@ def test_demo_commands_name_files_that_exist():
 
 
 def test_every_command_and_file_key_is_documented():
-    for word in ("ingest", "audit", "drift", "trend", "run"):
+    for word in ("ingest", "audit", "point", "drift", "trend", "run"):
         assert f"ssaudit {word}" in README
     for key in ("sign", "feed", "matrix", "inputs", "signals", "table", "variables", "outside"):
         assert re.search(rf"\b{key} = ", README), key
