@@ -71,6 +71,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"ssaudit {__version__}")
     commands = parser.add_subparsers(metavar="COMMAND", required=True, parser_class=_Parser)
+    _add_look(commands)
     _add_ingest(commands)
     _add_audit(commands)
     _add_point(commands)
@@ -86,10 +87,18 @@ def _add(commands: Any, name: str, command: Callable[[argparse.Namespace], int],
     return parser
 
 
+def _add_look(commands: Any) -> None:
+    parser = _add(commands, "look", _look, "say what an unknown export holds, and draft a layout")
+    parser.add_argument("path", type=Path, metavar="PATH", help="a file or a folder")
+    parser.add_argument("--draft", type=Path, metavar="FILE", help="write the draft layout here")
+
+
 def _add_ingest(commands: Any) -> None:
     parser = _add(commands, "ingest", _ingest, "take exports in and write them as one bank")
     parser.add_argument("sources", nargs="+", metavar="SOURCE", help="file, folder or pattern")
-    parser.add_argument("--revision", required=True, metavar="R", help="name of the model revision")
+    parser.add_argument(
+        "--revision", metavar="R", help="name of the model revision, unless the layout states it"
+    )
     parser.add_argument("--bank", required=True, type=Path, metavar="OUT.h5", help="bank to write")
     parser.add_argument(
         "--layout", type=Path, metavar="L.toml", help="where in the export what lies"
@@ -227,6 +236,18 @@ def _share(text: str) -> float:
     return value
 
 
+def _look(options: argparse.Namespace) -> int:
+    from ssaudit.intake.look import look
+    from ssaudit.report.look_text import look_text
+
+    _check_outputs((options.path,), options.draft)
+    found = look(options.path)
+    if options.draft is not None:
+        _write(found.draft, str(options.draft))
+    _show(look_text(found, draft=options.draft is None))
+    return OK
+
+
 def _ingest(options: argparse.Namespace) -> int:
     from ssaudit.intake.ingest import ingest
     from ssaudit.report.intake_text import intake_text
@@ -347,26 +368,38 @@ def _run(options: argparse.Namespace) -> int:
 
 def _check_outputs(inputs: Sequence[Path], *outputs: str | Path | None) -> None:
     """Refuse outputs that cannot be written or would overwrite, before there is work to lose."""
-    taken = {path.resolve(): "is an input and an output" for path in inputs}
+    # os.path answers where Path would raise: at names that are too long, at links in a circle.
+    taken = {os.path.realpath(path): "is an input and an output" for path in inputs}
     for output in outputs:
         if output in (None, "-"):
             continue
-        path = Path(str(output))
-        problem = taken.get(path.resolve(), "")
-        if path.is_dir() or not path.parent.is_dir():
-            problem = "is a folder" if path.is_dir() else "lies in no folder that there is"
+        path = os.path.realpath(str(output))
+        problem = taken.get(path, "")
+        if os.path.isdir(path):
+            problem = "is a folder"
+        elif not os.path.isdir(os.path.dirname(path)):
+            problem = "lies in no folder that there is"
         if problem:
             raise SsauditError(problem, where=str(output), do="choose another output")
-        taken[path.resolve()] = "is to hold two outputs"
+        taken[path] = "is to hold two outputs"
 
 
 def _write_json(text: str, target: str) -> None:
     if target == "-":
         _print(text + "\n")
-        return
+    else:
+        _write(text + "\n", target)
+
+
+def _write(text: str, target: str) -> None:
+    """Write a small text file, whole or not at all."""
+    path = Path(target)
+    temporary = path.with_name(f".writing-{path.name}-{os.getpid()}")
     try:
-        Path(target).write_text(text + "\n", encoding="utf-8")
+        temporary.write_text(text, encoding="utf-8")
+        os.replace(temporary, path)
     except OSError as error:
+        temporary.unlink(missing_ok=True)
         raise SsauditError(f"cannot be written ({error.strerror})", where=target,
                            do="choose another place") from error  # fmt: skip
 

@@ -110,7 +110,7 @@ class TestExitCodes:
             ("drift", "ledger", "--from", "A"),
             ("drift", "ledger", "--from", "A", "--to", "B", "--tolerance", "nan"),
             ("drift", "ledger", "--from", "A", "--to", "B", "--tolerance", "1"),
-            ("ingest", "x.h5", "--bank", "b.h5"), ("ingest", "--revision", "A", "--bank", "b.h5"),
+            ("ingest", "x.h5", "--revision", "A"), ("ingest", "--revision", "A", "--bank", "b.h5"),
         ],
     )  # fmt: skip
     def test_wrong_arguments_are_told_in_one_line(self, capsys, arguments):
