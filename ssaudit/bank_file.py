@@ -4,7 +4,7 @@ import contextlib
 import json
 import os
 import tempfile
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -18,6 +18,7 @@ from ssaudit.bank import (
     Points,
     Section,
     Source,
+    Stack,
     bank_digest,
     check_shapes,
     mark_unusable,
@@ -33,6 +34,14 @@ CHUNK_BYTES = 900_000
 FULL_PRECISION = 16
 # Bytes of small batches that wait to be written together.
 BUFFER_BYTES = 4_000_000
+
+
+Run = Callable[..., None]
+
+
+def call_now(task: Callable[..., object], *arguments: object) -> None:
+    """Do a task at once."""
+    task(*arguments)
 
 
 @dataclass(frozen=True, eq=False)
@@ -59,6 +68,26 @@ class Batch:
     digits_seen: int | None = None
     named: frozenset[str] = frozenset()
     basis: str = ""
+
+    @property
+    def size(self) -> int:
+        """Bytes of its matrices."""
+        return sum(8 * int(np.prod(stack.shape)) for stack in self.section.matrices.values())
+
+
+def stored_rows(entries: int) -> int:
+    """Points that a bank stores as a block; batches of a multiple of it are written at once.
+
+    Parameters
+    ----------
+    entries : int
+        Entries of the largest matrix.
+
+    Returns
+    -------
+    int
+    """
+    return max(1, CHUNK_BYTES // max(8, 8 * entries))
 
 
 @dataclass(frozen=True, eq=False)
@@ -95,6 +124,12 @@ class _OpenSection:
     waiting_bytes: int = 0
     digits_seen: int | None = None
 
+    @property
+    def rows(self) -> int:
+        """Points of a stored block, the same for all matrices."""
+        sizes = [int(np.prod(stack.shape[1:])) for stack in self.section.matrices.values()]
+        return stored_rows(max(sizes))
+
 
 class BankWriter:
     """Writes a bank batch by batch; the file appears under its name only when it is finished.
@@ -107,6 +142,9 @@ class BankWriter:
         Where the bank goes.
     revision : str
         Name of the model revision.
+    run : callable, optional
+        ``run(task, *arguments)`` does what need not be waited for, in the order given; by default
+        at once. Digests are complete only when all of it is done.
 
     Raises
     ------
@@ -114,11 +152,12 @@ class BankWriter:
         When the folder cannot be written to.
     """
 
-    def __init__(self, path: Path, revision: str) -> None:
+    def __init__(self, path: Path, revision: str, run: Run = call_now) -> None:
         import h5py
 
         self.path = path
         self.revision = revision
+        self._run = run
         self._sections: dict[tuple[Any, ...], _OpenSection] = {}
         self._settled: Settled | None = None
         self._new_folders: list[Path] = []
@@ -179,8 +218,13 @@ class BankWriter:
             self._flush(target)
         return target.number
 
-    def settle(self) -> Settled:
+    def settle(self, *, ids_given: bool = True) -> Settled:
         """Write what remains and check points against each other; no more can be added then.
+
+        Parameters
+        ----------
+        ids_given : bool
+            Whether the export named any points; numbers that were given to them never recur.
 
         Returns
         -------
@@ -196,12 +240,12 @@ class BankWriter:
         # Points without stackable matrices stand last, so that the first section is a real one.
         opened = sorted(self._sections.values(), key=lambda s: not s.section.states)
         for target in opened:
-            self._flush(target)
+            self._flush(target, last=True)
         points = _join([part for target in opened for part in target.points])
         for target in opened:
             target.points.clear()
         sections = tuple(_finished(target, self._file) for target in opened)
-        points = mark_unusable(points, sections)
+        points = mark_unusable(points, sections, ids_given=ids_given)
         if not np.any(points.void == ""):
             raise BankError(_why_none(points), where=self.path.name, do="mend the export")
         numbers = tuple(target.number for target in opened)
@@ -237,7 +281,7 @@ class BankWriter:
         BankError
             When there is no usable point, or the file cannot be put in its place.
         """
-        settled = self.settle()
+        settled = self.settle(ids_given=ids_given)
         digest = bank_digest(
             self.revision, ids_given, settled.points, settled.sections, settled.digests
         )
@@ -266,20 +310,25 @@ class BankWriter:
         self._new_folders = []
         return digest
 
-    def _flush(self, target: _OpenSection) -> None:
+    def _flush(self, target: _OpenSection, *, last: bool = False) -> None:
+        """Write what waits, as far as it fills stored blocks, and keep the rest waiting."""
         if not target.waiting:
             return
+        count = sum(len(section) for section in target.waiting)
+        written = count if last else count // target.rows * target.rows
         group = self._file.require_group(f"sections/{target.number}")
+        rest: dict[str, Stack] = {}
         for name in target.section.matrices:
             parts = [part.matrices[name][:] for part in target.waiting]
             block = parts[0] if len(parts) == 1 else np.concatenate(parts)
-            target.digest.update({name: block})
+            self._run(target.digest.update, {name: block[:written]})
+            rest[name] = block[written:].copy()
             try:
-                _extend(group, name, block)
+                _extend(group, name, block[:written], target.rows)
             except (OSError, RuntimeError) as error:
                 raise _unwritable(self.path, error) from error
-        target.waiting.clear()
-        target.waiting_bytes = 0
+        target.waiting = [replace(target.section, matrices=rest)] if written < count else []
+        target.waiting_bytes = sum(8 * int(np.prod(stack.shape)) for stack in rest.values())
 
     def _write_points(self, points: Points) -> None:
         group = self._file.create_group("points")
@@ -329,9 +378,9 @@ def read_bank(path: str | os.PathLike[str]) -> ModelBank:
         ) from error
     try:
         return _read(file, path)
-    except BankError:
+    except BankError as error:
         file.close()
-        raise
+        raise BankError(error.what, where=error.where or str(path), do=error.do) from error
     except (KeyError, ValueError, TypeError, OSError, AttributeError, RuntimeError) as error:
         file.close()
         raise BankError(
@@ -382,7 +431,7 @@ def _read(file: Any, path: Path) -> ModelBank:
     )
 
 
-def _extend(group: Any, name: str, block: NDArray[np.float64]) -> None:
+def _extend(group: Any, name: str, block: NDArray[np.float64], rows: int) -> None:
     """Write matrices of more points behind those that are there."""
     stored = group[name].shape[0] if name in group else 0
     if block[:1].size == 0:
@@ -391,20 +440,25 @@ def _extend(group: Any, name: str, block: NDArray[np.float64]) -> None:
             del group[name]
         group.create_dataset(name, shape=(stored + len(block), *block.shape[1:]), dtype="<f8")
         return
-    if name not in group:
-        _create(group, name, block.shape[1:])
-    group[name].resize(stored + len(block), axis=0)
-    group[name][stored:] = block
+    dataset = group[name] if name in group else _create(group, name, block.shape[1:], rows)
+    dataset.resize(stored + len(block), axis=0)
+    whole = len(block) // rows * rows if stored % rows == 0 else 0
+    flat = np.ascontiguousarray(block, dtype="<f8")
+    for start in range(0, whole, rows):
+        # Whole blocks go straight to the file, past the library's cache.
+        dataset.id.write_direct_chunk((stored + start, 0, 0), flat[start : start + rows])
+    if whole < len(block):
+        dataset[stored + whole :] = flat[whole:]
 
 
-def _create(group: Any, name: str, shape: tuple[int, ...]) -> None:
-    rows = max(1, CHUNK_BYTES // max(8, 8 * int(np.prod(shape))))
-    group.create_dataset(
+def _create(group: Any, name: str, shape: tuple[int, ...], rows: int) -> Any:
+    return group.create_dataset(
         name,
         shape=(0, *shape),
         maxshape=(None, *shape),
-        chunks=(rows, *(max(1, size) for size in shape)),
+        chunks=(rows, *shape),
         dtype="<f8",
+        fillvalue=None,
     )
 
 
@@ -438,12 +492,24 @@ def _make_folders(folder: Path) -> list[Path]:
 
 def _write_words(group: Any, name: str, words: Any) -> None:
     """Store strings as UTF-8 of fixed width, which reads at once."""
-    encoded = np.char.encode(words, "utf-8") if len(words) else np.zeros(0, "S1")
+    encoded = _encoded(words) if len(words) else np.zeros(0, "S1")
     group.create_dataset(name, data=encoded.astype(f"S{max(1, encoded.dtype.itemsize)}"))
 
 
+def _encoded(words: Any) -> Any:
+    """Strings as UTF-8; those of ASCII alone, as most are, without going through each."""
+    letters = np.ascontiguousarray(words).view(np.uint32).reshape(len(words), -1)
+    if letters.max() < 128:
+        return letters.astype(np.uint8).view(f"S{letters.shape[1]}").reshape(-1)
+    return np.strings.encode(words, "utf-8")
+
+
 def _read_words(dataset: Any) -> Any:
-    return np.char.decode(dataset[:], "utf-8")
+    encoded = dataset[:]
+    letters = encoded.view(np.uint8).reshape(len(encoded), -1) if len(encoded) else encoded
+    if len(encoded) and letters.max() < 128:
+        return letters.astype(np.uint32).view(f"U{letters.shape[1]}").reshape(-1)
+    return np.strings.decode(encoded, "utf-8")
 
 
 def _escape(name: str) -> str:

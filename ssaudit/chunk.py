@@ -324,25 +324,16 @@ class _Chunk:
         if self.mass is not None:
             wanted[:] = False
         rows = np.flatnonzero(wanted)
-        closed = self.closed
-        some = ClosedModels(
-            closed.A[rows],
-            closed.void[rows],
-            closed.held[rows],
-            closed.K if closed.K is None or len(closed.K) == 1 else closed.K[rows],
-            None if closed.open is None else closed.open.at(rows),
-            closed.states,
-            closed.dt,
-        )
         matrices = {name: M[rows] for name, M in self.matrices.items()}
         asked = any("real_" in r.quantity for r in self.settings.criteria.requirements)
         return find_distances(
             self.settings.loop,
             self.section,
             matrices,
-            some,
+            self.closed.at(rows),
+            neutral=self.neutral,
             real_radius=asked or self.settings.real_radius,
-        ).spread(rows, len(closed.A))
+        ).spread(rows, len(self.closed.A))
 
     def both_answers(self, judgement: Judgement, deep: bool) -> Columns:
         """Whether each point is stable inside, and whether it seems so from outside."""

@@ -306,7 +306,8 @@ def _point(options: argparse.Namespace) -> int:
 
     loop = read_loop(options.loop)
     criteria = read_criteria(options.criteria) if options.criteria else None
-    _check_outputs((options.bank, *files_of_loop(options.loop)), options.json)
+    stated = (options.criteria,) if options.criteria else ()
+    _check_outputs((options.bank, *stated, *files_of_loop(options.loop)), options.json)
     with read_bank(options.bank) as bank:
         report = explain_point(bank, loop, id=options.id, near=options.near, criteria=criteria)
     if options.json is not None:
@@ -326,6 +327,7 @@ def _drift(options: argparse.Namespace) -> int:
 
     tolerance = TOLERANCE if options.tolerance is None else options.tolerance
     found = compare_runs(options.ledger, options.before, options.after, tolerance=tolerance)
+    _check_outputs([*found.before.path.iterdir(), *found.after.path.iterdir()], options.json)
     if options.json is not None:
         from ssaudit.report.records import as_json, drift_record
 

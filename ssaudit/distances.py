@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import Matrices, Section
+from ssaudit.loop.assembly import OpenLoop
 from ssaudit.loop.breaking import break_loop
 from ssaudit.loop.model import SIGNS, ClosedModels, Loop
 from ssaudit.margins.disk import find_disk_margin
@@ -17,6 +18,8 @@ from ssaudit.margins.real_radius import find_real_radius
 from ssaudit.margins.sensitivity import SensitivityPeaks, find_sensitivity_peaks
 from ssaudit.margins.stability_radius import find_stability_radius
 from ssaudit.margins.state_space import StateSpace
+from ssaudit.modes.neutral import neutral_states
+from ssaudit.modes.stacked import distinct_rows
 
 Floats = NDArray[np.float64]
 NO_LOOP = ""
@@ -62,7 +65,8 @@ class Distances:
     places : dict of (points,) arrays
         Where a quantity is worst: ``<quantity>_loop`` (str) and ``<quantity>_frequency`` [rad/s].
     unknown : dict of (points,) bool
-        Where the numbers do not decide a quantity.
+        Where a quantity is not known to be met or missed: the numbers do not decide it, or it is
+        not defined. No such loop is no such case.
     loops : tuple of SingleLoop
         Every single loop, at the points that have distances.
     rows : (k,) int
@@ -89,7 +93,7 @@ class Distances:
                 name: over(values, NO_LOOP if values.dtype == object else np.nan)
                 for name, values in self.places.items()
             },
-            {name: over(values, False) for name, values in self.unknown.items()},
+            {name: over(values, True) for name, values in self.unknown.items()},
             self.loops,
             rows,
         )
@@ -101,6 +105,7 @@ def find_distances(
     matrices: Matrices,
     closed: ClosedModels,
     *,
+    neutral: Sequence[int] = (),
     real_radius: bool = False,
 ) -> Distances:
     """Find how far the points of a chunk are from trouble.
@@ -115,6 +120,8 @@ def find_distances(
         The matrices.
     closed : ClosedModels
         The closed models; points must be usable.
+    neutral : sequence of int
+        States that are left out where nothing depends on them, whatever the gains.
     real_radius : bool
         Whether to find the radii for real changes too, which takes longer than all the rest.
 
@@ -125,15 +132,36 @@ def find_distances(
     """
     if not len(closed.A):
         return _collect((), _blank(0), 0)
-    radii = _radii(closed.A, closed.dt, real_radius)
+    opened = None if closed.K is None else _opened(loop, section, matrices, closed)
+    kinds, kind_of = distinct_rows(states_left_out(opened, closed, neutral))
+    lots = [np.flatnonzero(kind_of == number) for number in range(len(kinds))]
+    found = []
+    for rows, kind in zip(lots, kinds, strict=True):
+        some = {name: M[rows] for name, M in matrices.items()}
+        out = np.flatnonzero(kind)
+        found.append(_find_alike(loop, section, some, closed.at(rows), out, real_radius))
+    return found[0] if len(found) == 1 else _joined(found, lots)
+
+
+def _find_alike(
+    loop: Loop,
+    section: Section,
+    matrices: Matrices,
+    closed: ClosedModels,
+    out: NDArray[np.int64],
+    real_radius: bool,
+) -> Distances:
+    """Distances of points of which the same states are left out."""
+    radii = _radii(_without(closed.A, out, 1, 2), closed.dt, real_radius)
     if closed.K is None:
-        return _collect((), {**_blank(len(closed.A)), **radii}, len(closed.A))
-    opened = loop.open(section, matrices) if closed.open is None else closed.open
+        blank = {**_blank(len(closed.A)), **radii}
+        return _collect((), blank, len(closed.A), unknown=True)
+    opened = _opened(loop, section, matrices, closed)
     sign = SIGNS[loop.sign]
     inputs, signals = loop.channels(section)
     K = np.broadcast_to(closed.K, (len(closed.A), *closed.K.shape[1:]))
     loops = tuple(
-        _single(loop, section, matrices, closed, K, sign, side, channel, names[channel])
+        _single(loop, section, matrices, closed, out, side, channel, names[channel])
         for side, names, channels in (
             ("input", section.inputs, inputs),
             ("signal", loop.signals(section), signals),
@@ -142,9 +170,9 @@ def find_distances(
     )
     if not inputs:
         return _collect((), {**_blank(len(closed.A)), **radii}, len(closed.A))
-    at_inputs = break_loop(opened, K, sign, inputs=inputs)
-    at_signals = break_loop(opened, K, sign, signals=signals)
-    both = break_loop(opened, K, sign, inputs=inputs, signals=signals)
+    at_inputs = break_without(opened, K, sign, out, inputs=inputs)
+    at_signals = break_without(opened, K, sign, out, signals=signals)
+    both = break_without(opened, K, sign, out, inputs=inputs, signals=signals)
     found = dict(radii)
     factor = find_gain_range(*_matrices(at_inputs), closed.dt)
     decided = factor.confirmed | ~factor.stable
@@ -157,6 +185,98 @@ def find_distances(
     disks = [found[f"disk_margin_{name}"] for name in ("input", "output", "both")]
     found["disk_margin"] = _least(disks)
     return _collect(loops, found, len(closed.A))
+
+
+def _opened(loop: Loop, section: Section, matrices: Matrices, closed: ClosedModels) -> OpenLoop:
+    return loop.open(section, matrices) if closed.open is None else closed.open
+
+
+def states_left_out(
+    opened: OpenLoop | None, closed: ClosedModels, neutral: Sequence[int]
+) -> NDArray[np.bool_]:
+    """Find neutral states on which nothing depends, neither the models nor the gains.
+
+    Parameters
+    ----------
+    opened : OpenLoop or None
+        What the gains close; None for models that come closed.
+    closed : ClosedModels
+        The closed models.
+    neutral : sequence of int
+        States that the criteria exempt.
+
+    Returns
+    -------
+    (points, n) bool
+        None of a point at which some are neutral only because the gains cancel what depends on
+        them: another gain would not.
+    """
+    named, sampled = np.array(neutral, dtype=np.int64), closed.dt > 0
+    found = neutral_states(closed.A, named, sampled)
+    if opened is None or closed.K is None or not found.any():
+        return found
+    fed: NDArray[np.bool_] = (np.matmul(closed.K, opened.C) != 0).any(axis=1)
+    cancelled = found & (fed | ~neutral_states(opened.A, named, sampled))
+    return np.asarray(found & ~cancelled.any(axis=1, keepdims=True))
+
+
+def break_without(
+    opened: OpenLoop, K: Floats, sign: int, out: NDArray[np.int64], **broken: Sequence[int]
+) -> StateSpace:
+    """Break a loop as `ssaudit.loop.breaking.break_loop` does, and leave states out of it.
+
+    Parameters
+    ----------
+    opened, K, sign
+        As there.
+    out : (k,) int
+        States on which nothing depends.
+    **broken : sequence of int
+        ``inputs`` and ``signals``, as there.
+
+    Returns
+    -------
+    StateSpace
+    """
+    L = break_loop(opened, K, sign, **broken)
+    return StateSpace(_without(L.A, out, 1, 2), _without(L.B, out, 1), _without(L.C, out, 2), L.D)
+
+
+def _without(M: Floats, out: NDArray[np.int64], *axes: int) -> Floats:
+    for axis in axes if len(out) else ():
+        M = np.delete(M, out, axis=axis)
+    return M
+
+
+def _joined(found: Sequence[Distances], lots: Sequence[NDArray[np.int64]]) -> Distances:
+    """Join the distances of lots of points, in the order of the points."""
+    order = np.argsort(np.concatenate(lots))
+
+    def join(tables: Any) -> dict[str, NDArray[Any]]:
+        tables = list(tables)
+        return {name: np.concatenate([t[name] for t in tables])[order] for name in tables[0]}
+
+    def record(records: Any) -> Any:
+        records = list(records)
+        return type(records[0])(**join(map(vars, records)))
+
+    loops = tuple(
+        SingleLoop(
+            of_lots[0].side,
+            of_lots[0].channel,
+            record(loop.margins for loop in of_lots),
+            record(loop.gains for loop in of_lots),
+            record(loop.peaks for loop in of_lots),
+        )
+        for of_lots in zip(*(lot.loops for lot in found), strict=True)
+    )
+    return Distances(
+        join(lot.quantities for lot in found),
+        join(lot.places for lot in found),
+        join(lot.unknown for lot in found),
+        loops,
+        np.arange(len(order)),
+    )
 
 
 def _least(
@@ -206,8 +326,7 @@ def _single(
     section: Section,
     matrices: Matrices,
     closed: ClosedModels,
-    K: Floats,
-    sign: int,
+    out: NDArray[np.int64],
     side: str,
     channel: int,
     name: str,
@@ -215,12 +334,13 @@ def _single(
     """Margins of the loop broken at one channel; its own delay is exact, those of others Padé."""
     opened, late = loop.open_without_delay(section, matrices, side, channel)
     chosen = {"inputs": [channel]} if side == "input" else {"signals": [channel]}
-    broken = _matrices(break_loop(opened, K, sign, **chosen))
+    K, sign = np.asarray(closed.K), SIGNS[loop.sign]
+    broken = _matrices(break_without(opened, K, sign, out, **chosen))
     whole = broken
     if late:
-        modelled = loop.open(section, matrices) if closed.open is None else closed.open
-        whole = _matrices(break_loop(modelled, K, sign, **chosen))
-    delay = np.full(len(K), late) if late else None
+        modelled = _opened(loop, section, matrices, closed)
+        whole = _matrices(break_without(modelled, K, sign, out, **chosen))
+    delay = np.full(len(closed.A), late) if late else None
     return SingleLoop(
         side,
         name,
@@ -230,13 +350,20 @@ def _single(
     )
 
 
-def _collect(loops: Sequence[SingleLoop], found: Found, count: int) -> Distances:
-    """Worst of all single loops, and everything under the names of the ledger's columns."""
+def _collect(
+    loops: Sequence[SingleLoop], found: Found, count: int, unknown: bool = False
+) -> Distances:
+    """Worst of all single loops, and everything under the names of the ledger's columns.
+
+    Without single loops what they would have is unknown, or there is nothing to know.
+    """
     quantities: dict[str, Floats] = {}
     places: dict[str, NDArray[Any]] = {}
-    unknown: dict[str, NDArray[np.bool_]] = {}
+    undecided: dict[str, NDArray[np.bool_]] = {}
     for name, (value, frequency, decided) in found.items():
-        quantities[name], unknown[name] = value, ~decided
+        quantities[name] = value
+        defined = bool(loops) or unknown or "radius" in name
+        undecided[name] = ~decided | (np.isnan(value) & defined)
         places[f"{name}_frequency"] = frequency
     for name, sense in SINGLE.items():
         table = [_of_loop(name, loop) for loop in loops]
@@ -250,9 +377,10 @@ def _collect(loops: Sequence[SingleLoop], found: Found, count: int) -> Distances
         quantities[name] = values[worst, rows]
         places[f"{name}_loop"] = np.where(known.any(axis=0), names[worst], NO_LOOP)
         places[f"{name}_frequency"] = frequencies[worst, rows]
-        undecided = [~decided for _, _, decided in table]
-        unknown[name] = np.any(undecided, axis=0) if table else np.zeros(count, dtype=bool)
-    return Distances(quantities, places, unknown, tuple(loops), np.arange(count))
+        undecided[name] = np.full(count, unknown)
+        for value, _, decided in table:
+            undecided[name] |= ~decided | np.isnan(value)
+    return Distances(quantities, places, undecided, tuple(loops), np.arange(count))
 
 
 # Quantities of the whole closed loop.

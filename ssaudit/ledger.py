@@ -169,7 +169,7 @@ def read_ledger(ledger: str | os.PathLike[str]) -> list[LoggedRun]:
         When there is no such folder, or a run in it is damaged.
     """
     folder = Path(ledger)
-    if not folder.is_dir():
+    if not os.path.isdir(folder):
         raise LedgerError(
             "there is no such ledger", where=str(folder), do="log a run: ssaudit audit --ledger"
         )
@@ -226,7 +226,7 @@ def find_run(ledger: str | os.PathLike[str], name: str) -> LoggedRun:
 
 def find_logged(ledger: str | os.PathLike[str], digest: str) -> LoggedRun | None:
     """Find the run with a digest, if the ledger has it."""
-    if not Path(ledger).is_dir():
+    if not os.path.isdir(ledger):
         return None
     paths = sorted(Path(ledger).glob(f"{FOLDER}*-{digest}"))
     return _read_run(paths[0]) if paths else None
@@ -267,7 +267,7 @@ class RunWriter:
                     folder.mkdir()
                     self._made.append(folder)
             self._folder = Path(tempfile.mkdtemp(prefix=".writing-", dir=self._ledger))
-        except OSError as error:
+        except (OSError, ValueError) as error:
             self._remove_made()
             raise _unwritable(self._ledger, error) from error
 
@@ -470,9 +470,9 @@ def _sync(path: Path) -> None:
         os.close(handle)
 
 
-def _unwritable(ledger: Path, error: OSError) -> LedgerError:
+def _unwritable(ledger: Path, error: OSError | ValueError) -> LedgerError:
     return LedgerError(
-        f"cannot be written to ({error.strerror or error})",
+        f"cannot be written to ({getattr(error, 'strerror', None) or error})",
         where=str(ledger),
         do="choose another folder",
     )

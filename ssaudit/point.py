@@ -1,16 +1,16 @@
 """One point, explained: its modes, its loops, what would help and what would be lost first."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.bank import ModelBank, Points, Section
+from ssaudit.bank import ModelBank, Section
 from ssaudit.chunk import Part, Settings, audit_chunk, named_rows
 from ssaudit.criteria import Criteria
-from ssaudit.distances import Distances, SingleLoop, find_distances
+from ssaudit.distances import SingleLoop, break_without, find_distances, states_left_out
 from ssaudit.errors import SsauditError
 from ssaudit.loop.model import SIGNS, ClosedModels, Loop
 from ssaudit.margins.gain_range import StableGains, find_stable_gains
@@ -140,7 +140,10 @@ def explain_point(
     part = audit_chunk(bank.revision, section, points, matrices, settings)
     closed = loop.close(section, points, matrices)
     usable = closed.void[0] == "" and "E" not in matrices
-    distances = find_distances(loop, section, matrices, closed) if usable else None
+    neutral = [i for i, name in enumerate(closed.states) if name in criteria.neutral]
+    distances = None
+    if usable:
+        distances = find_distances(loop, section, matrices, closed, neutral=neutral)
     at = {name: float(column[0]) for name, column in points.coordinates.items()}
     return PointReport(
         str(points.ids[0]),
@@ -150,7 +153,7 @@ def explain_point(
         {name: column[0] for name, column in part.points.items()},
         _modes(part),
         distances.loops if distances else (),
-        _stable_gains(loop, section, points, closed, distances, matrices),
+        _stable_gains(loop, section, closed, matrices, neutral) if usable else None,
         _effects(loop, section, closed, matrices) if usable and closed.K is not None else (),
         loop.formula,
         {name: at[name] - value for name, value in (near or {}).items()},
@@ -232,18 +235,17 @@ def _modes(part: Part) -> list[dict[str, Any]]:
 def _stable_gains(
     loop: Loop,
     section: Section,
-    points: Points,
     closed: ClosedModels,
-    distances: Distances | None,
     matrices: Mapping[str, Floats],
+    neutral: Sequence[int],
 ) -> StableGains | None:
     """All stable intervals of one factor on all gains."""
-    if distances is None or closed.K is None:
+    if closed.K is None:
         return None
-    from ssaudit.loop.breaking import break_loop
-
     opened = loop.open(section, matrices) if closed.open is None else closed.open
-    broken = break_loop(opened, closed.K, SIGNS[loop.sign], inputs=range(len(section.inputs)))
+    out = np.flatnonzero(states_left_out(opened, closed, neutral)[0])
+    inputs = range(len(section.inputs))
+    broken = break_without(opened, closed.K, SIGNS[loop.sign], out, inputs=inputs)
     return find_stable_gains(broken.A, broken.B, broken.C, broken.D, closed.dt)
 
 

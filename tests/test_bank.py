@@ -72,7 +72,8 @@ def test_coordinates_that_are_no_numbers_make_their_point_void():
 
 def test_all_claimants_of_an_id_or_a_place_are_void():
     twice = bank(ids=["a", "b", "c", "a", "e", "f"]).points.void.tolist()
-    assert twice == ["its id is used by 2 points of the export", "", ""] + twice[:1] + ["", ""]
+    used = "its id is used by 2 points of the export"
+    assert twice == [used, "", "", used, "", ""]
     speed = np.array([1.0, 2, 2, 2, 5, -0.0])
     same = bank(coordinates={"speed": (speed, "m/s")}).points.void.tolist()
     # The third of the equal speeds has another tag, and so another place.
@@ -98,9 +99,7 @@ def test_counting_of_claims_agrees_with_a_direct_count():
             coordinates={"speed": (speed, ""), "mass": (mass, "")},
         ).points
         place = list(zip(speed, mass, strict=True))
-        expected = [
-            list(ids).count(ids[k]) > 1 or place.count(place[k]) > 1 for k in range(30)
-        ]
+        expected = [list(ids).count(ids[k]) > 1 or place.count(place[k]) > 1 for k in range(30)]
         assert (points.void != "").tolist() == expected
 
 

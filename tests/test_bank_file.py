@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from ssaudit.bank import Source, build_bank
-from ssaudit.bank_file import Batch, BankWriter, read_bank
+from ssaudit.bank_file import BankWriter, Batch, read_bank
 from ssaudit.errors import BankError
 
 RNG = np.random.default_rng(21)
@@ -99,16 +99,16 @@ def test_digits_found_by_inspection_are_the_most_of_a_section(tmp_path):
 
 
 def test_nothing_is_left_when_the_work_stops(tmp_path):
-    class Stop(Exception):
+    class StopError(Exception):
         pass
 
     def stopped():
         with BankWriter(tmp_path / "new" / "deep" / "bank.h5", "R") as writer:
             bank = some_bank(3)
             writer.append(Batch(bank.points, bank.sections[0]))
-            raise Stop
+            raise StopError
 
-    with pytest.raises(Stop):
+    with pytest.raises(StopError):
         stopped()
     assert list(tmp_path.iterdir()) == []
 

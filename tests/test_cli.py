@@ -233,7 +233,7 @@ class TestWhatIsShown:
         hard = '[[require]]\nname = "the hard one"\nquantity = "damping_ratio"\nat_least = 0.9\n'
         (project.folder / "criteria.toml").write_text(easy + hard)
         text = project.audit(project.bank("A", [0.5])).out
-        assert "the hard one" in text
+        assert "the hard one: damping_ratio ≥ 0.9" in text
         assert "stability: all poles decay" in text
         assert "and 6 more requirements" in text
 

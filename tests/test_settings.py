@@ -84,7 +84,7 @@ def test_numbers_are_floats_whole_or_not(value, number):
 @pytest.mark.parametrize("value", [True, "3", math.nan, math.inf, -math.inf, 10**400, [1], {}])
 def test_what_is_no_finite_number_is_refused(value):
     assert not is_finite_number(value)
-    with pytest.raises(SsauditError, match="f: key is .*, not a finite number"):
+    with pytest.raises(SsauditError, match=r"f: key is .*, not a finite number"):
         value_of(value, float)
 
 

@@ -18,6 +18,7 @@ from ssaudit.intake.container import (
     unit_of,
 )
 from ssaudit.intake.layout import COLUMN_MAJOR, Layout
+from ssaudit.intake.orientation import BY_SHAPES
 from ssaudit.intake.pattern import Pattern
 from ssaudit.intake.piece import OnePoint, Piece, gather
 
@@ -78,6 +79,7 @@ def _one(container: Container, layout: Layout, group: str, fields: Mapping[str, 
         names,
         dt,
         digits,
+        basis=BY_SHAPES,
     )
 
 

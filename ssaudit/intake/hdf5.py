@@ -2,7 +2,7 @@
 
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -58,32 +58,45 @@ class Hdf5Container:
 
     file: Any
     where: str
+    _safe: set[str] = field(default_factory=set)
+    _opened: dict[str, Any] = field(default_factory=dict)
 
     def __contains__(self, name: str) -> bool:
         import h5py
 
         with damage_reported(self.where):
-            for path in _ancestors(name):
-                refuse_foreign_link(self.file, path, self.where)
-            return isinstance(self.file.get(name), h5py.Dataset)
+            return isinstance(self._open(name), h5py.Dataset)
 
     def array(self, name: str) -> "Hdf5Array":
         """Return a dataset, checked."""
-        with damage_reported(f"{self.where}, {name}"):
-            for path in _ancestors(name):
+        where = f"{self.where}, {name}"
+        with damage_reported(where):
+            return checked_dataset(self._open(name), where)
+
+    def _open(self, name: str) -> Any:
+        """Dataset or group of a name, or None; links out of the file are refused."""
+        if name not in self._opened:
+            self._check(name)
+            self._opened[name] = self.file.get(name)
+        return self._opened[name]
+
+    def _check(self, name: str) -> None:
+        """Refuse a path that leads through a link into another file."""
+        for path in _ancestors(name):
+            if path not in self._safe:
                 refuse_foreign_link(self.file, path, self.where)
-            return checked_dataset(self.file, name, self.where)
+                self._safe.add(path)
 
     def under(self, prefix: str) -> list[str]:
         """Names of the links in a group; "" lists the top."""
         group = prefix.rstrip("/")
         with damage_reported(self.where):
             if not group:
-                return list(self.file)[:MOST_NAMES]
+                return _members(self.file, self.where)[:MOST_NAMES]
             if self.file.get(group, getlink=True) is None:
                 return []
-            refuse_foreign_link(self.file, group, self.where)
-            return [f"{prefix}{name}" for name in self.file[group]]
+            self._check(group)
+            return [f"{prefix}{name}" for name in _members(self.file[group], self.where)]
 
     def groups(self, depth: int) -> list[str]:
         """Names of the groups that lie at a depth, 0 for those at the top."""
@@ -94,7 +107,7 @@ class Hdf5Container:
             for _ in range(depth + 1):
                 below = []
                 for base in names:
-                    for name in self.file[base] if base else self.file:
+                    for name in _members(self.file[base] if base else self.file, self.where):
                         path = f"{base}/{name}" if base else name
                         refuse_foreign_link(self.file, path, self.where)
                         if self.file.get(path, getclass=True) is h5py.Group:
@@ -107,9 +120,7 @@ class Hdf5Container:
     def attribute(self, path: str, name: str) -> Any:
         """Value of an attribute of a group or dataset, or None."""
         with damage_reported(f"{self.where}, {path}@{name}"):
-            for part in _ancestors(path):
-                refuse_foreign_link(self.file, part, self.where)
-            owner = self.file.get(path) if path else self.file
+            owner = self._open(path) if path else self.file
             return None if owner is None else owner.attrs.get(name)
 
     def unit(self, name: str) -> str:
@@ -119,6 +130,14 @@ class Hdf5Container:
             if value is not None:
                 return _text(value)
         return ""
+
+
+def _members(group: Any, where: str) -> list[str]:
+    """Names of the links of a group; one that is no text names nothing that could be asked for."""
+    names = list(group)
+    if not all(isinstance(name, str) for name in names):
+        raise SourceError("holds a name that is not UTF-8", where=where, do="rename it")
+    return names
 
 
 def _ancestors(name: str) -> list[str]:
@@ -170,17 +189,15 @@ class Hdf5Array:
             return np.asarray(self.dataset[()])
 
 
-def checked_dataset(group: Any, name: str, path: str) -> Hdf5Array:
-    """Return a dataset of a group whose values all lie in the file itself.
+def checked_dataset(dataset: Any, where: str) -> Hdf5Array:
+    """Return a dataset whose values all lie in the file itself.
 
     Parameters
     ----------
-    group : h5py.Group
-        Where to look.
-    name : str
-        Name of the link in the group.
-    path : str
-        The file, for messages.
+    dataset : h5py.Dataset
+        The dataset.
+    where : str
+        File and name, for messages.
 
     Returns
     -------
@@ -193,9 +210,6 @@ def checked_dataset(group: Any, name: str, path: str) -> Hdf5Array:
     """
     import h5py
 
-    refuse_foreign_link(group, name, path)
-    where = f"{path}, {name}"
-    dataset = group[name]
     if not isinstance(dataset, h5py.Dataset):
         raise SourceError("is a group where a dataset belongs", where=where)
     if dataset.is_virtual or dataset.external:

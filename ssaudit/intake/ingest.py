@@ -3,15 +3,17 @@
 import os
 from collections.abc import Callable, Generator, Iterator, Sequence
 from contextlib import closing
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
 
-from ssaudit.bank import ModelBank, Source, Strings, number_points
-from ssaudit.bank_file import BankWriter, Batch, read_bank
-from ssaudit.errors import SourceError
+from ssaudit.bank import Points, Source, Strings, number_points
+from ssaudit.bank_file import BankWriter, Batch, Settled
+from ssaudit.errors import BankError, SourceError
 from ssaudit.intake.align import Aligner
+from ssaudit.intake.background import SMALL_BYTES, Background
+from ssaudit.intake.compose import compose
 from ssaudit.intake.csv_table import open_csv
 from ssaudit.intake.groups import grouped_pieces
 from ssaudit.intake.layout import FILE, GROUP, ROW, Layout, read_layout
@@ -20,6 +22,7 @@ from ssaudit.intake.matrix_files import MATRIX, parcels, read_point
 from ssaudit.intake.parquet_table import open_parquet
 from ssaudit.intake.piece import OnePoint, Piece, complete, gather
 from ssaudit.intake.records import record_pieces
+from ssaudit.intake.report import IntakeReport
 from ssaudit.intake.rows import row_pieces
 from ssaudit.intake.sources import (
     OPENERS,
@@ -31,6 +34,7 @@ from ssaudit.intake.sources import (
     same_file,
 )
 from ssaudit.intake.stacked import stacked_pieces
+from ssaudit.intake.survey import Survey
 from ssaudit.intake.table import Table
 
 Progress = Callable[[str, int, int], None]
@@ -58,6 +62,8 @@ class Intake:
         How many points are void, by reason.
     sources : tuple of Source
         The files read.
+    report : IntakeReport
+        What was found in them.
     """
 
     bank: Path
@@ -66,6 +72,7 @@ class Intake:
     points: int
     void: dict[str, int]
     sources: tuple[Source, ...]
+    report: IntakeReport
 
 
 def ingest(
@@ -106,32 +113,105 @@ def ingest(
     if not revision:
         raise SourceError("the revision has no name", do="name it: --revision R")
     files = find_files(sources, described)
-    if any(same_file(file.path, target) for file in files):
-        raise SourceError(
-            "is a source and the bank to write", where=str(target), do="choose another bank"
-        )
+    inputs = {file.path: "source" for file in files}
+    if layout is not None:
+        inputs[Path(layout)] = "layout"
+    for path, kind in inputs.items():
+        if same_file(path, target):
+            raise SourceError(
+                f"is a {kind} and the bank to write", where=str(target), do="choose another bank"
+            )
     total = sum(file.path.stat().st_size for file in files)
-    taken: list[Source] = []
-    done, found, named, aligner = 0, 0, True, Aligner()
-    with BankWriter(target, revision) as writer:
+    survey, aligner, taken = Survey(), Aligner(), _Taken()
+    with Background() as background, BankWriter(target, revision, background.run) as writer:
         for parcel in parcels_of(files, described):
-            count = 0
-            with closing(batches_of(parcel, described, found + 1)) as batches:
-                for batch, has_ids in batches:
-                    writer.append(aligner.align(batch, str(parcel[0].path)))
-                    count += len(batch.points)
-                    named = named and has_ids
-            found += count
-            for number, file in enumerate(parcel):
-                # Where each matrix has its file, the first of a point stands for it.
-                held = 0 if number else count
-                taken.append(Source(file.name, file_digest(file.path), held))
-                done += file.path.stat().st_size
-                progress("ingest", done, total)
-        digest = writer.finish(taken, ids_given=named)
-    with read_bank(target) as written:
-        void = count_reasons(written)
-        return Intake(target, revision, digest, len(written), void, tuple(taken))
+            for batch in _batches_told(parcel, described, taken, total, progress):
+                batch = aligner.align(batch, str(parcel[0].path))
+                number = writer.append(batch)
+                background.run_sized(batch.size, survey.add, number, batch, parcel[0].name)
+            taken.add_sources(parcel, background)
+            progress("ingest", taken.bytes, total)
+        settled = _settle(writer, files, taken)
+        background.wait()
+        read = taken.sources
+        report = compose(settled, survey, read, total, described, aligner.reordered)
+        void = count_reasons(settled.points)
+        digest = writer.finish(read, ids_given=False not in taken.named, intake=report.to_json())
+    return Intake(target, revision, digest, len(settled.points), void, read, report)
+
+
+@dataclass(eq=False)
+class _Taken:
+    """What has been taken in so far.
+
+    Attributes
+    ----------
+    points, held : int
+        Points of all files, and of the file that is being read.
+    bytes : int
+        Size of the files that are done.
+    named : set of bool
+        Whether files named their points.
+    """
+
+    points: int = 0
+    held: int = 0
+    bytes: int = 0
+    named: set[bool] = field(default_factory=set)
+    _sources: list[tuple[str, Callable[[], str], int]] = field(default_factory=list)
+
+    def add_sources(self, parcel: Sequence[SourceFile], background: Background) -> None:
+        """Note the files of a parcel that has been read."""
+        if not self.held:
+            raise SourceError("holds no points", where=str(parcel[0].path))
+        for number, file in enumerate(parcel):
+            # Where each matrix has its file, the first of a point stands for it.
+            held = 0 if number else self.held
+            size = file.path.stat().st_size
+            self._sources.append((file.name, _digest(file.path, size, background), held))
+            self.bytes += size
+        self.points += self.held
+        self.held = 0
+
+    @property
+    def sources(self) -> tuple[Source, ...]:
+        """All files, with their digests."""
+        return tuple(Source(name, digest(), held) for name, digest, held in self._sources)
+
+
+def _batches_told(
+    parcel: Sequence[SourceFile],
+    layout: Layout | None,
+    taken: _Taken,
+    total: int,
+    progress: Progress,
+) -> Iterator[Batch]:
+    """Read a parcel of files, and tell how far it has come."""
+    size, read = sum(file.path.stat().st_size for file in parcel), 0
+    with closing(batches_of(parcel, layout, taken.points + 1)) as batches:
+        for batch, has_ids in batches:
+            taken.held += len(batch.points)
+            taken.named.add(has_ids)
+            yield batch
+            # How far text has been read is not known; its models are at most as large.
+            read = min(read + batch.size, size)
+            progress("ingest", taken.bytes + read, total)
+
+
+def _settle(writer: BankWriter, files: Sequence[SourceFile], taken: _Taken) -> Settled:
+    try:
+        return writer.settle(ids_given=True in taken.named)
+    except BankError as error:
+        more = f" and {len(files) - 1} more files" if len(files) > 1 else ""
+        raise BankError(error.what, where=f"{files[0].path}{more}", do=error.do) from error
+
+
+def _digest(path: Path, size: int, background: Background) -> Callable[[], str]:
+    """Start on the digest of a file; what is returned gives it."""
+    if size < SMALL_BYTES:
+        found = file_digest(path)
+        return lambda: found
+    return background.start(file_digest, path).result
 
 
 def parcels_of(files: Sequence[SourceFile], layout: Layout | None) -> list[list[SourceFile]]:
@@ -225,8 +305,8 @@ def _ids(piece: Piece, first: int) -> Strings:
     return number_points(first, len(piece)) if piece.ids is None else piece.ids
 
 
-def count_reasons(bank: ModelBank) -> dict[str, int]:
-    """Count the void points of a bank by reason, the most frequent first."""
-    void = bank.points.void[bank.points.void != ""]
+def count_reasons(points: Points) -> dict[str, int]:
+    """Count the void points by reason, the most frequent first."""
+    void = points.void[points.void != ""]
     reasons, counts = np.unique(void.astype(np.str_), return_counts=True)
     return {str(reasons[i]): int(counts[i]) for i in np.argsort(-counts, kind="stable")}

@@ -16,6 +16,7 @@ from ssaudit.errors import SourceError
 from ssaudit.intake.entries import Axes, find_axes
 from ssaudit.intake.guard import MOST_POINTS
 from ssaudit.intake.layout import Column, Layout
+from ssaudit.intake.orientation import BY_LABELS
 from ssaudit.intake.piece import AXES, Piece
 from ssaudit.intake.rows import select
 from ssaudit.intake.table import Cells, DigitCounter, Table
@@ -248,6 +249,7 @@ class _Window:
         dt = layout.dt if isinstance(layout.dt, float) else 0.0
         return Piece(
             ids, columns, self._values, self._void, {}, {}, dt, None, counter.most,
+            BY_LABELS,
         )  # fmt: skip
 
     def _present(self) -> NDArray[np.bool_]:
@@ -290,7 +292,7 @@ class _Window:
                 names[kind] = tuple(words[k] for k in np.flatnonzero(kept[kind]))
         return Piece(
             piece.ids, piece.columns, matrices, void, {}, names,
-            piece.dt, piece.digits, piece.digits_seen,
+            piece.dt, piece.digits, piece.digits_seen, piece.basis,
         )  # fmt: skip
 
 

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 from ssaudit.errors import SourceError
 from ssaudit.intake.guard import WHOLE_BYTES, damage_reported
 from ssaudit.intake.layout import COLUMN_MAJOR, Layout
+from ssaudit.intake.orientation import BY_SHAPES
 from ssaudit.intake.piece import OnePoint, parse_number
 from ssaudit.intake.sources import SourceFile
 from ssaudit.intake.table import DigitCounter
@@ -95,8 +96,9 @@ def read_point(files: Sequence[SourceFile], layout: Layout) -> OnePoint:
     digits = layout.digits if isinstance(layout.digits, int) else None
     dt = layout.dt if isinstance(layout.dt, float) else 0.0
     return OnePoint(
-        id_, matrices if not problem else {}, columns, problem, {}, {}, dt, digits, counter.most
-    )
+        id_, matrices if not problem else {}, columns, problem, {}, {}, dt, digits, counter.most,
+        BY_SHAPES,
+    )  # fmt: skip
 
 
 def _id(file: SourceFile, layout: Layout, fields: Mapping[str, str]) -> str:

@@ -8,7 +8,7 @@ from typing import Protocol
 
 from ssaudit.errors import SourceError
 
-_FIELD = re.compile(r"\{([A-Za-z_][A-Za-z0-9_]*)\}|\*")
+_FIELD = re.compile(r"\{([A-Za-z_][A-Za-z0-9_]*)(?::([1-9]))?\}|\*")
 # Longest pattern that is taken.
 LONGEST_PATTERN = 500
 
@@ -39,9 +39,10 @@ class Matcher(Protocol):
 class Pattern:
     """Text with fields: ``V{speed}_M{mass}.csv``; ``*`` is a field without a name.
 
-    A field is the shortest text, of one character or more and without "/", before the first place
-    at which the text that follows the field occurs. Nothing is tried twice, so matching takes a
-    time proportional to the name, whatever the pattern and the name are.
+    ``{row:1}`` is a field of that many characters, and may touch the next. Any other field is the
+    shortest text, of one character or more and without "/", before the first place at which the
+    text that follows the field occurs. Nothing is tried twice, so matching takes a time
+    proportional to the name, whatever the pattern and the name are.
 
     Parameters
     ----------
@@ -60,6 +61,8 @@ class Pattern:
     --------
     >>> Pattern("V{speed}_M{mass}.csv").match("V12.5_M90.csv")
     {'speed': '12.5', 'mass': '90'}
+    >>> Pattern("A{row:1}{column:1}").match("A12")
+    {'row': '1', 'column': '2'}
     >>> Pattern("V{speed}.csv").match("V12/90.csv") is None
     True
     """
@@ -77,7 +80,8 @@ class Pattern:
                 where=self.where,
                 do='write it relative to the folder, parted by "/"',
             )
-        if any(not literal for literal in self._literals[1:-1]):
+        touching = zip(self._literals[1:-1], self._widths, strict=False)
+        if any(not literal and not width for literal, width in touching):
             raise SourceError(f"two fields of {self.text!r} touch", where=self.where)
         twice = [field for field in self.fields if self.fields.count(field) > 1]
         if twice:
@@ -94,6 +98,10 @@ class Pattern:
     @cached_property
     def _names(self) -> list[str]:
         return [field.group(1) or "" for field in _FIELD.finditer(self.text)]
+
+    @cached_property
+    def _widths(self) -> list[int]:
+        return [int(field.group(2) or 0) for field in _FIELD.finditer(self.text)]
 
     @property
     def fields(self) -> tuple[str, ...]:
@@ -114,7 +122,13 @@ class Pattern:
             return {} if name == first else None
         found, at = {}, len(first)
         for number, (field, literal) in enumerate(zip(self._names, others, strict=True)):
-            if number == len(others) - 1:
+            width = self._widths[number]
+            if width:
+                end = at + width
+                last = number == len(others) - 1
+                if not name.startswith(literal, end) or (last and end + len(literal) != len(name)):
+                    return None
+            elif number == len(others) - 1:
                 end = len(name) - len(literal)
                 if end <= at or not name.endswith(literal):
                     return None

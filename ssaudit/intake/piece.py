@@ -50,6 +50,9 @@ class Piece:
         Significant digits stated.
     digits_seen : int or None
         Most significant digits that an entry was written with, found by inspection.
+    basis : str
+        How rows are told from columns: "labels" where the file says row and column of every
+        entry, "shapes" where it holds matrices of stated shape, "" where it holds rows of entries.
     """
 
     ids: Strings | None
@@ -61,6 +64,7 @@ class Piece:
     dt: float = 0.0
     digits: int | None = None
     digits_seen: int | None = None
+    basis: str = ""
 
     def __len__(self) -> int:
         return len(self.void)
@@ -79,6 +83,7 @@ class OnePoint:
     dt: float = 0.0
     digits: int | None = None
     digits_seen: int | None = None
+    basis: str = ""
 
     @property
     def signature(self) -> tuple[Any, ...]:
@@ -87,7 +92,7 @@ class OnePoint:
         columns = tuple((name, isinstance(value, str)) for name, value in self.columns.items())
         return (
             shapes, columns, tuple(self.names.items()), tuple(self.units.items()),
-            self.dt, self.digits,
+            self.dt, self.digits, self.basis,
         )  # fmt: skip
 
 
@@ -133,6 +138,7 @@ def _joined(points: list[OnePoint]) -> Piece:
         dt=first.dt,
         digits=first.digits,
         digits_seen=max(seen) if seen else None,
+        basis=first.basis,
     )
 
 
@@ -176,7 +182,7 @@ def complete(piece: Piece, layout: Layout, where: str, ids: Strings) -> Batch:
     given = frozenset(kind for kind, words in zip(KINDS, _stated(piece, layout), strict=True)
                       if words is not None)  # fmt: skip
     seen = None if section.digits is not None else piece.digits_seen
-    return Batch(points, section, digits_seen=seen, named=given)
+    return Batch(points, section, digits_seen=seen, named=given, basis=piece.basis)
 
 
 def no_matrices(count: int) -> Section:

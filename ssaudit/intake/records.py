@@ -13,6 +13,7 @@ from ssaudit.errors import SourceError
 from ssaudit.intake.container import unflatten
 from ssaudit.intake.guard import LONGEST_NAME, as_digits, as_number, damage_reported, split_names
 from ssaudit.intake.layout import COLUMN_MAJOR, KINDS, Column, Layout, Place
+from ssaudit.intake.orientation import BY_SHAPES
 from ssaudit.intake.piece import OnePoint, Piece, gather
 from ssaudit.intake.table import DigitCounter
 
@@ -130,7 +131,10 @@ def _point(
     if (b"true" in line or b"false" in line) and not problem:
         # NumPy would take truth values for 1 and 0.
         problem = _truth_values(record, layout)
-    return OnePoint(id_, matrices, columns, problem or missing, {}, names, dt, digits, counter.most)
+    basis = "" if _is_flat(record, layout) else BY_SHAPES
+    return OnePoint(
+        id_, matrices, columns, problem or missing, {}, names, dt, digits, counter.most, basis
+    )
 
 
 def _empty(layout: Layout) -> dict[str, Any]:
@@ -227,6 +231,12 @@ def _matrices(
         return {}, "A is missing"
     shaped = unflatten(found, layout.order == COLUMN_MAJOR)
     return {name: stack[0] for name, stack in shaped.items()}, ""
+
+
+def _is_flat(record: Mapping[str, Any], layout: Layout) -> bool:
+    """Whether A is one row of entries."""
+    value = look_up(record, layout.matrices["A"])
+    return not (isinstance(value, list) and value and isinstance(value[0], list))
 
 
 def _truth_values(record: Mapping[str, Any], layout: Layout) -> str:

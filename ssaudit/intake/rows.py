@@ -13,6 +13,7 @@ from ssaudit.intake.container import unflatten
 from ssaudit.intake.entries import Axes, find_axes
 from ssaudit.intake.guard import as_digits
 from ssaudit.intake.layout import COLUMN_MAJOR, Column, Layout, Place
+from ssaudit.intake.orientation import BY_LABELS
 from ssaudit.intake.pattern import Pattern, find_entries
 from ssaudit.intake.piece import AXES, OnePoint, Piece, gather
 from ssaudit.intake.records import read_matrix
@@ -151,6 +152,7 @@ def _pieces_of(
         0.0,
         _digits(block, layout, where),
         counter.most,
+        "" if plan.lists else BY_LABELS,
     )
     dt = _times(block, layout, void)
     if plan.lists:

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import MATRIX_NAMES, Strings
+from ssaudit.bank_file import stored_rows
 from ssaudit.errors import SourceError
 from ssaudit.intake.container import (
     Container,
@@ -21,6 +22,7 @@ from ssaudit.intake.container import (
 )
 from ssaudit.intake.guard import BATCH_BYTES, MOST_POINTS, WHOLE_BYTES, as_words
 from ssaudit.intake.layout import COLUMN_MAJOR, FILE, LAST_AXIS, Layout
+from ssaudit.intake.orientation import BY_SHAPES
 from ssaudit.intake.piece import Piece
 from ssaudit.settings import nearest
 
@@ -37,6 +39,7 @@ class _Export:
     names: Mapping[str, tuple[str, ...]]
     dt: float
     digits: int | None
+    basis: str
     step: int
     read: Callable[[int, int], dict[str, NDArray[np.float64]]]
 
@@ -78,6 +81,7 @@ def stacked_pieces(
             export.names,
             export.dt,
             export.digits,
+            basis=export.basis,
         )
 
 
@@ -103,6 +107,7 @@ def _open(container: Container, layout: Layout, fields: Mapping[str, str], stem:
         names,
         dt,
         digits,
+        _basis(arrays, axes),
         _step(arrays, axes, count),
         _reader(container, arrays, axes, layout, single),
     )
@@ -207,6 +212,12 @@ def _count(
     return int(count)
 
 
+def _basis(arrays: Mapping[str, Stored], axes: Mapping[str, int]) -> str:
+    """Rows are told from columns by shapes, where these are those of matrices."""
+    full = all(len(s.shape) >= (3 if axes[name] >= 0 else 2) for name, s in arrays.items())
+    return BY_SHAPES if full else ""
+
+
 def _full_length(column: NDArray[Any], count: int) -> NDArray[Any]:
     return column if len(column) == count else np.repeat(column, count)
 
@@ -222,7 +233,11 @@ def _step(arrays: Mapping[str, Stored], axes: Mapping[str, int], count: int) -> 
     block = max((s.block(axes[n]) for n, s in arrays.items() if axes[n] >= 0), default=1)
     if block > step:
         return block if block * size <= WHOLE_BYTES else step
-    return step // block * block
+    if block > 1:
+        return step // block * block
+    largest = max(int(np.prod(s.shape, dtype=object)) for s in arrays.values()) // count
+    stored = stored_rows(largest)
+    return step // stored * stored or step
 
 
 def _reader(

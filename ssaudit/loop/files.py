@@ -225,7 +225,7 @@ def _read_csv(path: str | os.PathLike[str]) -> tuple[list[str], list[list[float]
             lines = [line for line in csv.reader(file) if any(cell.strip() for cell in line)]
     except OSError as error:
         raise LoopError(f"cannot be read ({error.strerror})", where=where) from error
-    except (UnicodeDecodeError, csv.Error) as error:
+    except (ValueError, csv.Error) as error:
         raise LoopError(f"is not a CSV table ({error})", where=where) from error
     if len(lines) < 2:
         raise LoopError("holds no breakpoints", where=where)

@@ -77,6 +77,13 @@ class ClosedModels:
     states: tuple[str, ...] = ()
     dt: float = 0.0
 
+    def at(self, rows: NDArray[np.int64]) -> "ClosedModels":
+        """Return the models of some points."""
+        K = self.K if self.K is None or len(self.K) == 1 else self.K[rows]
+        opened = None if self.open is None else self.open.at(rows)
+        of_points = (self.A[rows], self.void[rows], self.held[rows])
+        return ClosedModels(*of_points, K, opened, self.states, self.dt)
+
 
 @dataclass(frozen=True, eq=False)
 class Loop:

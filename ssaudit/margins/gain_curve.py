@@ -155,7 +155,8 @@ def _hamiltonian(G: StateSpace, level: Real) -> Real:
     A = G.A + G.B @ inner @ DT @ C
     BB = G.B @ inner @ G.B.swapaxes(1, 2)
     CC = CT @ (np.eye(D.shape[1]) + D @ inner @ DT) @ C
-    # The product BB CC alone matters: share its size between both.
-    share = np.linalg.norm(CC, axis=(1, 2)) / np.linalg.norm(BB, axis=(1, 2)).clip(1e-300)
+    # The product BB CC alone matters: share its size between both, where neither is zero.
+    with np.errstate(over="ignore"):
+        share = np.linalg.norm(CC, axis=(1, 2)) / np.linalg.norm(BB, axis=(1, 2)).clip(1e-300)
     share = np.sqrt(np.where((share > 0) & np.isfinite(share), share, 1.0))[:, None, None]
     return join(A, share * BB, -CC / share, -A.swapaxes(1, 2))

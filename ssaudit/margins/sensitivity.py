@@ -127,7 +127,8 @@ def peak_where(system: StateSpace, dt: float, chosen: Bool, *, structured: bool 
     Returns
     -------
     Peak
-        Points not chosen are confirmed as long as their numbers are finite.
+        Points not chosen are confirmed as long as their numbers are finite. Where nothing passes
+        the value is 0, at no frequency.
 
     Examples
     --------
@@ -138,6 +139,9 @@ def peak_where(system: StateSpace, dt: float, chosen: Bool, *, structured: bool 
     """
     value, frequency = np.full((2, len(system)), np.nan)
     confirmed = finite_points(system.A, system.D)
+    silent = chosen & _nothing_passes(system)
+    value[silent] = 0.0
+    chosen = chosen & ~silent
     if chosen.any():
         mapped = to_continuous(system[chosen], dt)
         poles, stable = find_stable(mapped.A, 0.0)
@@ -147,3 +151,16 @@ def peak_where(system: StateSpace, dt: float, chosen: Bool, *, structured: bool 
         frequency[chosen] = np.where(decided, unwarp(peak.frequency, dt), np.nan)
         confirmed[chosen] = decided
     return Peak(value, frequency, confirmed)
+
+
+def _nothing_passes(system: StateSpace) -> Bool:
+    """Where no path leads from any input to any output, whatever the numbers on it."""
+    reached = (system.B != 0).any(axis=2)
+    steps = system.A != 0
+    for _ in range(system.A.shape[-1]):
+        further = reached | (steps & reached[:, np.newaxis]).any(axis=2)
+        if (further == reached).all():
+            break
+        reached = further
+    shown = ((system.C != 0) & reached[:, np.newaxis]).any(axis=(1, 2))
+    return np.asarray(~(shown | (system.D != 0).any(axis=(1, 2))))

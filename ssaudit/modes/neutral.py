@@ -10,9 +10,9 @@ def neutral_states(
     """Find which of the named states nothing depends on.
 
     Such a state only sums up the others: its column is exactly zero (of A - I, when sampled), and
-    leaving out its row and column leaves all other poles what they are. A named state on which
-    only neutral states depend is neutral too, as is the heading that a position sums up. A named
-    state that something else does depend on, because the loop feeds it back, stays.
+    leaving out its row and column leaves all other poles what they are. A named state that
+    anything does depend on stays: one that the loop feeds back, and one that another sums up, as a
+    position does a heading, for then an offset makes that one grow (`grows_at_rest`).
 
     Parameters
     ----------

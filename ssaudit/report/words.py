@@ -38,7 +38,7 @@ def number(value: float | None, digits: int = 4) -> str:
     if value is None or math.isnan(value):
         return "-"
     if math.isinf(value) or value == 0:
-        return f"{value:g}"
+        return f"{value + 0.0:g}"  # which turns -0 into 0
     rounded = float(f"{value:.{digits}g}")
     if 1e-4 <= abs(rounded) < 1e6:
         places = max(0, digits - 1 - math.floor(math.log10(abs(rounded))))

@@ -316,6 +316,13 @@ def test_hdf5_values_in_other_files_are_refused(tmp_path, take_in):
     assert "is a link into another file" in message(take_in, tmp_path / "points.h5")
 
 
+def test_an_hdf5_name_that_is_no_text(tmp_path, take_in):
+    with h5py.File(tmp_path / "name.h5", "w") as file:
+        file["A"] = np.ones((2, 1, 1))
+        file.create_group("points").create_dataset(b"sp\xff\xfeed", data=np.arange(2.0))
+    assert "holds a name that is not UTF-8" in message(take_in, tmp_path / "name.h5")
+
+
 def test_an_hdf5_dataset_that_was_never_written(tmp_path, take_in):
     with h5py.File(tmp_path / "claim.h5", "w") as file:
         file.create_dataset("A", (10**9, 30, 30), "f8", chunks=(100, 30, 30))

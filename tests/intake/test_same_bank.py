@@ -2,10 +2,10 @@
 
 from functools import partial
 
+import intake_writers as writers
 import numpy as np
 import pytest
 
-import writers
 from ssaudit.bank import build_bank
 from ssaudit.bank_file import read_bank
 from ssaudit.intake.ingest import ingest

@@ -57,14 +57,17 @@ def place(text, unit=None, tag=False):
 def points_part(speed, mass, gear, ids=None):
     """Write the part of a layout that says where coordinates and tags lie."""
     head = f'ids = "{ids}"\n' if ids else ""
-    return head, f"""
+    return (
+        head,
+        f"""
 [coordinates.speed]
 {place(speed, "m/s")}
 [coordinates.mass]
 {place(mass, "t")}
 [tags.gear]
 {place(gear)}
-"""
+""",
+    )
 
 
 def layout_text(format_, points, body="", tail="", speed="speed", mass="mass", gear="gear",
@@ -128,7 +131,7 @@ def hdf5_group(folder, models, column_major=False):
                 group[f"model/{name}"] = matrix.T if column_major else matrix
             group.attrs["V"] = models.speed[k]
             group["m"] = models.mass[k]
-            group.attrs["gear"] = models.gear[k]
+            group.attrs["gear"] = str(models.gear[k])
     order = 'order = "column-major"' if column_major else ""
     matrices = "[matrices]\n" + "\n".join(f'{n} = "model/{n}"' for n in "ABCD")
     return layout_text("hdf5", "group", f'groups = "cases/{{id}}"\n{order}', matrices, "@V", "m",
