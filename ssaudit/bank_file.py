@@ -296,11 +296,11 @@ class BankWriter:
             _write_json(self._file, "intake", dict(intake or {}))
             self._file.attrs.update(
                 {
-                    "format": FORMAT,
+                    "format": fixed_text(FORMAT),
                     "schema": SCHEMA,
-                    "revision": self.revision,
+                    "revision": fixed_text(self.revision),
                     "ids_given": ids_given,
-                    "digest": digest,
+                    "digest": fixed_text(digest),
                 }
             )
             self._file.close()
@@ -335,7 +335,7 @@ class BankWriter:
         _write_words(group, "id", points.ids)
         for name, column in points.coordinates.items():
             dataset = group.create_dataset(f"at/{_escape(name)}", data=column)
-            dataset.attrs["units"] = points.units.get(name, "")
+            dataset.attrs["units"] = fixed_text(points.units.get(name, ""))
         for name, words in points.tags.items():
             _write_words(group, f"tag/{_escape(name)}", words)
         rows = np.flatnonzero(points.void != "")
@@ -381,7 +381,8 @@ def read_bank(path: str | os.PathLike[str]) -> ModelBank:
     except BankError as error:
         file.close()
         raise BankError(error.what, where=error.where or str(path), do=error.do) from error
-    except (KeyError, ValueError, TypeError, OSError, AttributeError, RuntimeError) as error:
+    # What a changed byte makes the library or numpy raise is of nearly any kind.
+    except Exception as error:
         file.close()
         raise BankError(
             f"is a damaged bank ({error})", where=str(path), do="ingest the export again"
@@ -389,7 +390,7 @@ def read_bank(path: str | os.PathLike[str]) -> ModelBank:
 
 
 def _read(file: Any, path: Path) -> ModelBank:
-    if file.attrs.get("format") != FORMAT:
+    if text_of(file.attrs.get("format")) != FORMAT:
         raise BankError("is HDF5 but not a bank", where=str(path), do="take it in: ssaudit ingest")
     if file.attrs["schema"] != SCHEMA:
         raise BankError(
@@ -411,7 +412,7 @@ def _read(file: Any, path: Path) -> ModelBank:
     points = Points(
         ids,
         {_unescape(name): at[name][:] for name in at},
-        {_unescape(name): str(at[name].attrs["units"]) for name in at},
+        {_unescape(name): text_of(at[name].attrs["units"]) for name in at},
         {_unescape(name): _read_words(tag[name]) for name in tag},
         void,
     )
@@ -419,12 +420,12 @@ def _read(file: Any, path: Path) -> ModelBank:
         raise BankError("is a damaged bank: its sections and its points differ", where=str(path))
     sources = tuple(Source(**source) for source in _read_json(file, "sources"))
     return ModelBank(
-        str(file.attrs["revision"]),
+        text_of(file.attrs["revision"]),
         points,
         tuple(sections),
         sources,
         bool(file.attrs["ids_given"]),
-        str(file.attrs["digest"]),
+        text_of(file.attrs["digest"]),
         path.name,
         file,
         _read_json(file, "intake"),
@@ -510,6 +511,21 @@ def _read_words(dataset: Any) -> Any:
     if len(encoded) and letters.max() < 128:
         return letters.astype(np.uint32).view(f"U{letters.shape[1]}").reshape(-1)
     return np.strings.decode(encoded, "utf-8")
+
+
+def fixed_text(text: str) -> Any:
+    """Text as an attribute of fixed length.
+
+    HDF5 keeps text of variable length on a heap of its own, and a damaged byte there can make the
+    library search it for ever.
+    """
+    encoded = text.encode("utf-8")
+    return np.array(encoded, dtype=f"S{max(1, len(encoded))}")
+
+
+def text_of(value: Any) -> str:
+    """Text of an attribute, of whatever length it was stored with."""
+    return value.decode("utf-8") if isinstance(value, bytes) else str(value)
 
 
 def _escape(name: str) -> str:

@@ -10,11 +10,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank_file import FORMAT as BANK_FORMAT
+from ssaudit.bank_file import text_of
 from ssaudit.errors import SourceError
 from ssaudit.intake.guard import MOST_POINTS, WHOLE_BYTES, damage_reported
 
 # Bytes of blocks that stay decompressed while points are read across them.
 CACHE_BYTES = 16_000_000
+# Objects that stay open.
+MOST_OPEN = 50
 # Names that are listed at the most in one group.
 MOST_NAMES = 5_000_000
 
@@ -44,7 +47,7 @@ def open_hdf5(path: Path) -> Iterator["Hdf5Container"]:
         file = h5py.File(path, "r", rdcc_nbytes=CACHE_BYTES)
     with file:
         with damage_reported(path):
-            is_bank = file.attrs.get("format") == BANK_FORMAT
+            is_bank = text_of(file.attrs.get("format")) == BANK_FORMAT
         if is_bank:
             raise SourceError(
                 "is a bank, not an export", where=str(path), do="name the exports alone"
@@ -76,6 +79,10 @@ class Hdf5Container:
     def _open(self, name: str) -> Any:
         """Dataset or group of a name, or None; links out of the file are refused."""
         if name not in self._opened:
+            # Open objects take memory; with a group a point there would be a few for each.
+            if len(self._opened) >= MOST_OPEN:
+                self._opened.clear()
+                self._safe.clear()
             self._check(name)
             self._opened[name] = self.file.get(name)
         return self._opened[name]

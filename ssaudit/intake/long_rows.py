@@ -96,15 +96,12 @@ def _contents_of(table: Table, layout: Layout, stem: str) -> _Contents:
     contents = _Contents()
     keys = [*long["point"], long["matrix"], long["row"], long["column"]]
     for block in table.blocks(list(dict.fromkeys(keys))):
-        codes = [
-            contents.points.setdefault(key, len(contents.points))
-            for key in dict.fromkeys(_point_keys(block, layout, stem, table.where).tolist())
-        ]
+        words, _ = _point_keys(block, layout, stem, table.where)
+        codes = [contents.points.setdefault(key, len(contents.points)) for key in words.tolist()]
         contents.ranges.append((min(codes, default=0), max(codes, default=-1)))
         if len(contents.points) > MOST_POINTS:
             raise SourceError(f"holds more than {MOST_POINTS} points", where=table.where)
-        labels = [block[long[key]].words(table.where, key) for key in ("matrix", "row", "column")]
-        for matrix, row, column in dict.fromkeys(zip(*(w.tolist() for w in labels), strict=True)):
+        for matrix, row, column in _distinct_entries(block, layout, table.where):
             if matrix in spelled:
                 contents.entries.setdefault(spelled[matrix], {})[row, column] = None
             if len(contents.entries.get(spelled.get(matrix, ""), ())) > 25_000_000:
@@ -118,18 +115,46 @@ def _contents_of(table: Table, layout: Layout, stem: str) -> _Contents:
     return contents
 
 
+def _distinct_entries(
+    block: Mapping[str, Cells], layout: Layout, where: str
+) -> list[tuple[str, str, str]]:
+    """Matrix, row and column labels that occur together, by first appearance."""
+    coded = [block[layout.long[key]].coded(where, key) for key in ("matrix", "row", "column")]
+    code = np.zeros(len(coded[0][1]), dtype=np.int64)
+    for words, places in coded:
+        code = code * max(1, len(words)) + places
+    _, first = np.unique(code, return_index=True)
+    return [
+        (str(coded[0][0][m]), str(coded[1][0][i]), str(coded[2][0][j]))
+        for m, i, j in zip(*(places[np.sort(first)] for _, places in coded), strict=True)
+    ]
+
+
 def _point_keys(
     block: Mapping[str, Cells], layout: Layout, stem: str, where: str
-) -> NDArray[np.str_]:
-    """Text that tells points apart: one column, several joined, or the file."""
-    columns = [block[name].words(where, name) for name in layout.long["point"]]
+) -> tuple[NDArray[np.str_], NDArray[np.int64]]:
+    """Text that tells points apart (one column, several joined, or the file), and each row's."""
+    columns = [block[name].coded(where, name) for name in layout.long["point"]]
     count = len(next(iter(block.values())))
     if not columns:
-        return np.full(count, stem)
-    joined = columns[0]
-    for column in columns[1:]:
-        joined = np.strings.add(np.strings.add(joined, ","), column)
-    return joined
+        return np.array([stem]), np.zeros(count, dtype=np.int64)
+    words, places = columns[0]
+    for others, other_places in columns[1:]:
+        code = places * max(1, len(others)) + other_places
+        found, first, places = np.unique(code, return_index=True, return_inverse=True)
+        left = words[found // max(1, len(others))]
+        words = np.strings.add(np.strings.add(left, ","), others[found % max(1, len(others))])
+        words, places = _by_first_appearance(words, first, places)
+    return words, places
+
+
+def _by_first_appearance(
+    words: NDArray[np.str_], first: NDArray[np.int64], places: NDArray[np.int64]
+) -> tuple[NDArray[np.str_], NDArray[np.int64]]:
+    order = np.argsort(first)
+    rank = np.empty(len(order), dtype=np.int64)
+    rank[order] = np.arange(len(order))
+    return words[order], rank[places]
 
 
 class _Window:
@@ -157,17 +182,16 @@ class _Window:
     ) -> None:
         """Put the entries of a block in their places."""
         layout, long = self.layout, self.layout.long
-        keys = _point_keys(block, layout, stem, where)
-        distinct, place = np.unique(keys, return_inverse=True)
-        codes = np.array([self._contents.points[key] for key in distinct.tolist()])[place]
+        words, place = _point_keys(block, layout, stem, where)
+        codes = np.array([self._contents.points[key] for key in words.tolist()])[place]
         inside = np.flatnonzero((codes >= self.first) & (codes < self.stop))
         points = codes[inside] - self.first
         values, wrong = block[long["value"]].numbers()
         counter.look_at(block[long["value"]], 1)
-        labels = {
-            key: np.unique(block[long[key]].words(where, key)[inside], return_inverse=True)
-            for key in ("matrix", "row", "column")
-        }
+        labels = {}
+        for key in ("matrix", "row", "column"):
+            names, places = block[long[key]].coded(where, key)
+            labels[key] = (names, places[inside])
         for name in self._values:
             text = layout.matrices[name]
             here = labels["matrix"][0][labels["matrix"][1]] == text
@@ -210,7 +234,8 @@ class _Window:
         """Take a coordinate or tag, the same in all rows of a point."""
         stored, known = self._columns[column.name], self._known[column.name]
         if column.is_tag:
-            values = cells.words(where, column.name).astype(object)[inside]
+            names, places = cells.coded(where, column.name)
+            values = names.astype(object)[places[inside]]
         else:
             numbers, _ = cells.numbers()
             values = numbers[inside]

@@ -125,6 +125,16 @@ class Cells:
             np.array(["" if cell is None else cell for cell in cells], dtype=object), where, what
         )
 
+    def coded(self, where: str, what: str) -> tuple[Strings, NDArray[np.int64]]:
+        """Cells as text: the distinct words, by first appearance, and the word of each cell."""
+        import pyarrow
+        import pyarrow.compute
+
+        coded = pyarrow.compute.dictionary_encode(self.values, null_encoding="encode")
+        words = Cells(coded.dictionary).words(where, what)
+        places = coded.indices.to_numpy(zero_copy_only=False).astype(np.int64)
+        return words, places
+
     def digits(self, most: int) -> tuple[int | None, int]:
         """Most significant digits in the first cells, and how many cells were looked at."""
         if not self.is_text:
