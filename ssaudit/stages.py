@@ -11,8 +11,10 @@ from ssaudit.bank import ModelBank
 from ssaudit.criteria import Criteria
 from ssaudit.csv_table import CsvWriter
 from ssaudit.drifting import TOLERANCE, Drift, drift
-from ssaudit.ledger import LoggedRun, RunWriter, describe_run, find_logged, find_run, run_digest
+from ssaudit.ledger import LoggedRun, find_logged, find_run
 from ssaudit.loop.model import Loop
+from ssaudit.provenance import describe_run, run_digest
+from ssaudit.run_writer import RunWriter
 from ssaudit.summary import Summary, Tally
 
 Path = str | os.PathLike[str]

@@ -15,9 +15,11 @@ from ssaudit.auditing import audit_parts
 from ssaudit.bank import build_bank
 from ssaudit.bank_file import read_bank
 from ssaudit.errors import BankError, LedgerError
-from ssaudit.ledger import RunWriter, describe_run, find_run, read_ledger, run_digest
+from ssaudit.ledger import find_run, read_ledger
 from ssaudit.loop.gains import ConstantGain, GainSchedule
 from ssaudit.loop.model import Loop
+from ssaudit.provenance import describe_run, run_digest
+from ssaudit.run_writer import RunWriter
 from ssaudit.stages import stream_audit
 from ssaudit.summary import Tally
 
@@ -166,7 +168,7 @@ class TestTables:
 
     def test_many_points_are_written_in_several_row_groups_in_order(self, oscillators, ledger,
                                                                     monkeypatch):  # fmt: skip
-        monkeypatch.setattr("ssaudit.ledger.GROUP_POINTS", 7)
+        monkeypatch.setattr("ssaudit.run_writer.GROUP_POINTS", 7)
         monkeypatch.setattr("ssaudit.auditing.CHUNK_BYTES", 32 * 3)
         bank = oscillators(np.linspace(0.3, 0.9, 50), ids=[f"p{i:02d}" for i in range(50)])
         run = log(ledger, bank).run
@@ -314,7 +316,7 @@ class TestOnce:
 
     def test_another_version_makes_another_run(self, bank, ledger, monkeypatch):
         log(ledger, bank)
-        monkeypatch.setattr("ssaudit.ledger.__version__", "99.0")
+        monkeypatch.setattr("ssaudit.provenance.__version__", "99.0")
         assert not log(ledger, bank).already_logged
 
 
@@ -322,10 +324,10 @@ class TestWhole:
     @pytest.mark.parametrize(
         "broken",
         [
-            "ssaudit.ledger.RunWriter._write",
+            "ssaudit.run_writer.RunWriter._write",
             "ssaudit.stages.describe_run",
-            "ssaudit.ledger._sync",
-            "ssaudit.ledger.find_logged",
+            "ssaudit.run_writer._sync",
+            "ssaudit.run_writer.find_logged",
             "ssaudit.summary.Tally.result",
             "ssaudit.auditing._verify",
         ],

@@ -8,8 +8,9 @@ from typing import Any
 from ssaudit.criteria import POINT_QUANTITIES
 from ssaudit.distances import SingleLoop
 from ssaudit.drifting import Drift
-from ssaudit.ledger import LoggedRun, finite
+from ssaudit.ledger import LoggedRun
 from ssaudit.point import PointReport
+from ssaudit.provenance import finite
 from ssaudit.report.audit_text import participating
 from ssaudit.report.words import CAUTIONS
 from ssaudit.stages import AuditReport
