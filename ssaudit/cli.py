@@ -189,7 +189,10 @@ def _add_run(commands: Any) -> None:
 
 def _add_worst(parser: Any) -> None:
     parser.add_argument(
-        "--worst", type=_natural, default=5, metavar="N", help="points to list (default 5)"
+        "--worst",
+        type=_natural,
+        metavar="N",
+        help="points to list (default: as many as leave a screen room for the rest)",
     )
 
 

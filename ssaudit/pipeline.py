@@ -145,7 +145,7 @@ def _text(table: dict[str, Any], key: str, where: str) -> str:
 
 
 def run_pipeline(
-    path: str | os.PathLike[str], *, worst: int = 10, progress: Progress | None = None
+    path: str | os.PathLike[str], *, worst: int | None = None, progress: Progress | None = None
 ) -> Iterator[Intake | AuditReport | Comparison]:
     """Run a pipeline stage by stage.
 
@@ -154,7 +154,7 @@ def run_pipeline(
     path : path
         The pipeline file.
     worst : int
-        How many of the worst points each audit lists.
+        How many of the worst points each audit lists; as many as fit a screen when absent.
     progress : callable, optional
         Called as ``progress(stage, done, total)``.
 

@@ -18,6 +18,8 @@ from ssaudit.run_writer import RunWriter
 from ssaudit.summary import Summary, Tally
 
 Path = str | os.PathLike[str]
+# Worst points that leave a screen of 40 lines room for the rest.
+WORST, WORST_WITH_MARGINS = 5, 3
 
 
 @dataclass(frozen=True, eq=False)
@@ -60,7 +62,7 @@ def stream_audit(
     depth: str = "modes",
     real_radius: bool = False,
     prove: str = "",
-    worst: int = 10,
+    worst: int | None = None,
     workers: int | None = None,
     progress: Progress | None = None,
 ) -> AuditReport:
@@ -81,7 +83,7 @@ def stream_audit(
     prove : str
         "doubt", "worst" or "all": settle these points by proof.
     worst : int
-        How many of the worst points the summary lists.
+        How many of the worst points the summary lists; as many as fit a screen when absent.
     workers : int, optional
         Worker threads; one a processor when absent.
     progress : callable, optional
@@ -96,6 +98,8 @@ def stream_audit(
     SsauditError
         When the inputs do not fit each other, or an output cannot be written; then nothing is.
     """
+    if worst is None:
+        worst = WORST_WITH_MARGINS if depth == "margins" else WORST
     tally = Tally(bank.revision, criteria, worst)
     logged, writer = None, None
     settings = {"depth": depth, "prove": prove}

@@ -21,8 +21,8 @@ from ssaudit.report.words import (
 from ssaudit.stages import AuditReport
 from ssaudit.summary import Summary
 
-MOST_REQUIREMENTS = 4
-MOST_REASONS = 2
+# Requirements and reasons for void points that are shown; fewer where margins need the room.
+MOST_REQUIREMENTS, MOST_REASONS = 4, 2
 LONGEST_ID = 24
 # Of each kind of margin one, so that the screen stays short; the others are in the ledger.
 SHOWN_MARGINS = (
@@ -46,7 +46,7 @@ def audit_text(report: AuditReport) -> RenderableType:
     Returns
     -------
     rich renderable
-        With five worst points at most 40 lines at 100 columns.
+        With the default number of worst points at most 40 lines at 100 columns.
     """
     summary, units = report.summary, report.about["units"]
     title = f"Audit of revision {summary.revision}: {summary.total} points"
@@ -126,7 +126,8 @@ def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
     """Give each requirement a line, and another that says where, if it is missed anywhere."""
     # Stability and, of too many, those that are missed at most points, in the order of the file.
     stability, *asked = summary.missed
-    most = sorted(asked, key=lambda missed: -missed.points)[: MOST_REQUIREMENTS - 1]
+    room = MOST_REQUIREMENTS - 1 - bool(summary.nearest)
+    most = sorted(asked, key=lambda missed: -missed.points)[:room]
     shown = [stability, *(missed for missed in asked if missed in most)]
     rows: list[list[str | Text]] = [
         [
@@ -193,11 +194,12 @@ def _within(
 
 def _void(summary: Summary) -> list[Text]:
     reasons = list(summary.void.items())
+    room = MOST_REASONS - bool(summary.nearest)
     lines = [
         Text.assemble(("void", STYLES["void"]), f" at {count}: {printable(reason)}")
-        for reason, count in reasons[:MOST_REASONS]
+        for reason, count in reasons[:room]
     ]
-    rest = sum(count for _, count in reasons[MOST_REASONS:])
+    rest = sum(count for _, count in reasons[room:])
     if rest:
         lines.append(one_line(f"void at {rest}, for other reasons: see the ledger or --csv"))
     for line in lines:

@@ -9,26 +9,27 @@ from rich.text import Text
 from ssaudit.ledger import LoggedRun
 from ssaudit.report.audit_text import shortened
 from ssaudit.report.words import ORDER, aligned, cautions, number, one_line, verdict
-from ssaudit.stages import Comparison
+from ssaudit.stages import WORST, Comparison
 
 NAMES = {"max_real": "max_real 1/s", "min_damping": "min_damping"}
 CHANGES = ("worse", "appeared", "vanished", "better")
 
 
-def drift_text(comparison: Comparison, most: int = 8) -> RenderableType:
+def drift_text(comparison: Comparison, most: int | None = None) -> RenderableType:
     """Lay out a comparison of two runs for the terminal.
 
     Parameters
     ----------
     comparison : Comparison
         What changed.
-    most : int
-        How many points to list of each kind.
+    most : int, optional
+        How many points to list of each kind; `WORST` when absent.
 
     Returns
     -------
     rich renderable
     """
+    most = WORST if most is None else most
     before, after, found = comparison.before, comparison.after, comparison.drift
     title = f"Drift from revision {before.revision} to {after.revision}"
     matched = f"points matched by {found.matched_by}"

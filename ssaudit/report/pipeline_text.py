@@ -11,15 +11,15 @@ from ssaudit.stages import AuditReport, Comparison
 Result = Intake | AuditReport | Comparison
 
 
-def stage_text(result: Result, worst: int) -> RenderableType:
+def stage_text(result: Result, worst: int | None = None) -> RenderableType:
     """Lay out what a stage came to.
 
     Parameters
     ----------
     result : Intake, AuditReport or Comparison
         From `ssaudit.pipeline.run_pipeline`.
-    worst : int
-        How many points to list.
+    worst : int, optional
+        How many points a comparison lists of each kind.
 
     Returns
     -------

@@ -13,7 +13,7 @@ from ssaudit.point import PointReport
 from ssaudit.provenance import finite
 from ssaudit.report.audit_text import participating
 from ssaudit.report.words import CAUTIONS
-from ssaudit.stages import AuditReport
+from ssaudit.stages import WORST, AuditReport
 
 SCHEMA = 1
 NUMBERS = (
@@ -188,7 +188,9 @@ def _answer(value: int) -> bool | None:
     return None if value < 0 else bool(value)
 
 
-def drift_record(before: LoggedRun, after: LoggedRun, drift: Drift, movers: int) -> dict[str, Any]:
+def drift_record(
+    before: LoggedRun, after: LoggedRun, drift: Drift, movers: int | None = None
+) -> dict[str, Any]:
     """Record a drift for ``--json``.
 
     Parameters
@@ -197,8 +199,8 @@ def drift_record(before: LoggedRun, after: LoggedRun, drift: Drift, movers: int)
         The runs compared.
     drift : Drift
         What changed.
-    movers : int
-        How many of the largest movers to list.
+    movers : int, optional
+        How many of the largest movers to list; `WORST` when absent.
 
     Returns
     -------
@@ -222,7 +224,7 @@ def drift_record(before: LoggedRun, after: LoggedRun, drift: Drift, movers: int)
             for name, moved in drift.moved.items()
         },
         "changed": _rows(points[points["change"] != "same"]),
-        "movers": _rows(drift.movers(movers)),
+        "movers": _rows(drift.movers(WORST if movers is None else movers)),
         "cautions": CAUTIONS,
     }
 
