@@ -6,7 +6,7 @@ import os
 import shutil
 import sys
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
@@ -243,7 +243,9 @@ def _look(options: argparse.Namespace) -> int:
     from ssaudit.intake.look import look
     from ssaudit.report.look_text import look_text
 
-    _check_outputs((options.path,), options.draft)
+    if options.draft is not None and options.draft.resolve() == options.path.resolve():
+        raise SsauditError("is an input and an output", where=str(options.draft),
+                           do="choose another output")  # fmt: skip
     found = look(options.path)
     if options.draft is not None:
         _write(found.draft, str(options.draft))
@@ -401,10 +403,12 @@ def _write(text: str, target: str) -> None:
     path = Path(target)
     temporary = path.with_name(f".writing-{path.name}-{os.getpid()}")
     try:
+        path.parent.mkdir(parents=True, exist_ok=True)
         temporary.write_text(text, encoding="utf-8")
         os.replace(temporary, path)
     except OSError as error:
-        temporary.unlink(missing_ok=True)
+        with suppress(OSError):
+            temporary.unlink(missing_ok=True)
         raise SsauditError(f"cannot be written ({error.strerror})", where=target,
                            do="choose another place") from error  # fmt: skip
 
