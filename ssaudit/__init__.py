@@ -11,7 +11,8 @@ __version__ = "0.1.0"
 
 if TYPE_CHECKING:
     from ssaudit.auditing import Audit, audit
-    from ssaudit.bank import ModelBank, build_bank
+    from ssaudit.bank import ModelBank
+    from ssaudit.bank_arrays import build_bank
     from ssaudit.bank_file import read_bank
     from ssaudit.criteria import Criteria, Requirement, read_criteria
     from ssaudit.drifting import Drift, drift
@@ -37,7 +38,7 @@ _HOMES = {
     "Requirement": "criteria",
     "SsauditError": "errors",
     "audit": "auditing",
-    "build_bank": "bank",
+    "build_bank": "bank_arrays",
     "drift": "drifting",
     "find_run": "ledger",
     "ingest": "intake.ingest",

@@ -105,7 +105,7 @@ def audit(
 
     Examples
     --------
-    >>> from ssaudit.bank import build_bank
+    >>> from ssaudit.bank_arrays import build_bank
     >>> from ssaudit.loop.gains import ConstantGain
     >>> bank = build_bank([[[1.0]], [[4.0]]], [[[1.0]], [[1.0]]], revision="A")
     >>> found = audit(bank, Loop("negative", ConstantGain([[3.0]])), Criteria())

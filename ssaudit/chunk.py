@@ -174,7 +174,8 @@ def _rows_to_prove(
     if prove == "all":
         return np.flatnonzero(judged)
     if prove == "doubt":
-        return np.flatnonzero(judgement.verdict == DOUBT)
+        # A proof of stability cannot settle doubt about a requirement.
+        return np.flatnonzero((judgement.verdict == DOUBT) & ~_only_short(judgement))
     if not prove or isinstance(prove, str):
         return np.zeros(0, dtype=np.int64)
     chosen = [row for row in np.flatnonzero(judged) if int(row) + offset in prove]

@@ -139,7 +139,9 @@ def find_distances(
     for rows, kind in zip(lots, kinds, strict=True):
         some = {name: M[rows] for name, M in matrices.items()}
         out = np.flatnonzero(kind)
-        found.append(_find_alike(loop, section, some, closed.at(rows), out, real_radius))
+        # Extreme entries overflow on the way; what comes of them is not confirmed.
+        with np.errstate(all="ignore"):
+            found.append(_find_alike(loop, section, some, closed.at(rows), out, real_radius))
     return found[0] if len(found) == 1 else _joined(found, lots)
 
 
@@ -360,7 +362,9 @@ def _collect(
     quantities: dict[str, Floats] = {}
     places: dict[str, NDArray[Any]] = {}
     undecided: dict[str, NDArray[np.bool_]] = {}
-    for name, (value, frequency, decided) in found.items():
+    # In one order for all chunks: they are joined to one table.
+    for name in WHOLE:
+        value, frequency, decided = found[name]
         quantities[name] = value
         defined = bool(loops) or unknown or "radius" in name
         undecided[name] = ~decided | (np.isnan(value) & defined)

@@ -8,7 +8,7 @@ from typing import Any
 
 from ssaudit.auditing import Progress
 from ssaudit.bank_file import read_bank
-from ssaudit.chunk import DEPTHS
+from ssaudit.chunk import DEPTHS, PROVE
 from ssaudit.criteria import read_criteria
 from ssaudit.errors import LedgerError, PipelineError
 from ssaudit.intake.ingest import Intake, ingest, no_progress
@@ -20,7 +20,7 @@ from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
 from ssaudit.stages import AuditReport, Comparison, compare_runs, stream_audit
 
 # Keys that may stand once for all revisions, or in one of them.
-SHARED = ("loop", "criteria", "layout", "depth")
+SHARED = ("loop", "criteria", "layout", "depth", "prove")
 
 
 @dataclass(frozen=True)
@@ -41,6 +41,8 @@ class Revision:
         Layout file.
     depth : str
         Depth of the audit.
+    prove : str
+        Points to settle by proof; "" for none.
     compare : str or None
         Revision (or run) to compare with.
     """
@@ -52,6 +54,7 @@ class Revision:
     criteria: Path
     layout: Path | None
     depth: str
+    prove: str
     compare: str | None
 
 
@@ -120,6 +123,9 @@ def _read_revision(table: dict[str, Any], folder: Path, banks: Path, where: str)
     depth = take(table, "depth", str, where=where, error=PipelineError, default="modes")
     if depth not in DEPTHS:
         raise PipelineError(f"depth is {depth!r}", where=where, do=nearest(depth, DEPTHS))
+    prove = take(table, "prove", str, where=where, error=PipelineError, default="")
+    if prove not in ("", *PROVE):
+        raise PipelineError(f"prove is {prove!r}", where=where, do=nearest(prove, PROVE))
     if "/" in name or "\\" in name or name in ("", ".", ".."):
         raise PipelineError(f"a revision cannot be named {name!r}", where=where)
     layout = take(table, "layout", str, where=where, error=PipelineError)
@@ -131,6 +137,7 @@ def _read_revision(table: dict[str, Any], folder: Path, banks: Path, where: str)
         _beside(folder, _text(table, "criteria", where)),
         _beside(folder, layout) if layout else None,
         depth,
+        prove,
         take(table, "compare", str, where=where, error=PipelineError),
     )
 
@@ -190,6 +197,7 @@ def run_pipeline(
                 criteria,
                 ledger=pipeline.ledger,
                 depth=revision.depth,
+                prove=revision.prove,
                 worst=worst,
                 progress=progress,
             )

@@ -246,7 +246,8 @@ def _stable_gains(
     out = np.flatnonzero(states_left_out(opened, closed, neutral)[0])
     inputs = range(len(section.inputs))
     broken = break_without(opened, closed.K, SIGNS[loop.sign], out, inputs=inputs)
-    return find_stable_gains(broken.A, broken.B, broken.C, broken.D, closed.dt)
+    with np.errstate(all="ignore"):  # as for the distances
+        return find_stable_gains(broken.A, broken.B, broken.C, broken.D, closed.dt)
 
 
 def _effects(

@@ -105,9 +105,12 @@ def apply_proofs(judgement: Judgement, outcomes: Mapping[int, tuple[str, str]]) 
     by_verdict, by_reason, by_worst, by_about = judgement.by_requirements
     for row, (outcome, how) in outcomes.items():
         if outcome == "unstable":
+            known = f"{reason[row]}; " if verdict[row] == LOST else "not stable: "
             verdict[row], about[row] = LOST, ""
-            reason[row] = f"not stable: proved by {how}"
+            reason[row] = f"{known}proved, {how}"
         elif outcome == "stable":
             verdict[row], reason[row] = by_verdict[row], by_reason[row]
             about[row], worst[row] = by_about[row], by_worst[row]
+        elif verdict[row] == DOUBT:
+            reason[row] += f"; proof open, {how}"
     return replace(judgement, verdict=verdict, reason=reason, doubt=about, worst=worst)

@@ -9,8 +9,9 @@ import h5py
 import numpy as np
 import pytest
 
-from ssaudit.bank import ModelBank, Source, build_bank
-from ssaudit.bank_file import BankWriter, Batch
+from ssaudit.bank import ModelBank, Source
+from ssaudit.bank_arrays import build_bank
+from ssaudit.bank_writer import BankWriter, Batch
 from ssaudit.cli import main
 
 

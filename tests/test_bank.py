@@ -3,7 +3,9 @@
 import numpy as np
 import pytest
 
-from ssaudit.bank import MatrixDigest, build_bank, check_shapes, chunks_of, default_names
+from ssaudit.bank import MatrixDigest, chunks_of
+from ssaudit.bank_arrays import build_bank
+from ssaudit.bank_checks import check_shapes, default_names
 from ssaudit.errors import BankError
 
 RNG = np.random.default_rng(20)

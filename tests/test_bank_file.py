@@ -7,8 +7,10 @@ import h5py
 import numpy as np
 import pytest
 
-from ssaudit.bank import Source, build_bank
-from ssaudit.bank_file import BankWriter, Batch, read_bank
+from ssaudit.bank import Source
+from ssaudit.bank_arrays import build_bank
+from ssaudit.bank_file import read_bank
+from ssaudit.bank_writer import BankWriter, Batch
 from ssaudit.errors import BankError
 
 RNG = np.random.default_rng(21)

@@ -8,7 +8,8 @@ import pandas as pd
 import pytest
 
 import ssaudit
-from ssaudit.bank import ModelBank, Points, build_bank
+from ssaudit.bank import ModelBank, Points
+from ssaudit.bank_arrays import build_bank
 from ssaudit.drifting import QUANTILES, drift
 from ssaudit.errors import SsauditError
 from ssaudit.ledger import newest_of_revisions

@@ -8,7 +8,7 @@ import pytest
 from numpy.typing import NDArray
 
 import ssaudit
-from ssaudit.bank import build_bank
+from ssaudit.bank_arrays import build_bank
 from ssaudit.criteria import MODE_QUANTITIES, Criteria, Requirement
 from ssaudit.judging import VERDICTS, Judgement, judge, missed_names, quantity_range
 from ssaudit.modes.stacked import Modes

@@ -12,7 +12,7 @@ import pytest
 
 import ssaudit
 from ssaudit.auditing import audit_parts
-from ssaudit.bank import build_bank
+from ssaudit.bank_arrays import build_bank
 from ssaudit.bank_file import read_bank
 from ssaudit.errors import BankError, LedgerError
 from ssaudit.ledger import find_run, read_ledger

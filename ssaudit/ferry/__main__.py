@@ -4,6 +4,7 @@ import argparse
 from pathlib import Path
 
 from ssaudit.ferry.export import write_exports, write_gain_tables
+from ssaudit.ferry.rounded import write_rounded
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -22,10 +23,11 @@ def main(arguments: list[str] | None = None) -> int:
     parser = argparse.ArgumentParser(
         prog="python -m ssaudit.ferry", description="Write the demo exports."
     )
-    parser.add_argument("folder", type=Path, help="where the three exports go")
+    parser.add_argument("folder", type=Path, help="where the exports go")
     parser.add_argument("--configs", type=Path, help="where the two gain tables go, if wanted")
     chosen = parser.parse_args(arguments)
     written = write_exports(chosen.folder)
+    written.append(write_rounded(chosen.folder / "ferry-b-rounded.npz"))
     if chosen.configs is not None:
         written += write_gain_tables(chosen.configs)
     print("\n".join(map(str, written)))

@@ -14,7 +14,7 @@ Array = NDArray[np.float64]
 SPEEDS = (15.0, 18.0, 21.0, 24.0)
 """Breakpoints of the schedule in speed [m/s]."""
 
-MASSES = (95.0, 105.0, 115.0, 125.0)
+MASSES = (95.0, 100.0, 110.0, 125.0)
 """Breakpoints of the schedule in mass [t]; the reserve tank begins to fill at one of them."""
 
 IMMERSION = 1.4
@@ -32,31 +32,38 @@ class Weights:
     ----------
     heave, heave_rate, pitch, pitch_rate : float
         Departures [m, m/s, rad, rad/s].
-    flap : float
-        Angle of either flap [rad]; a larger one makes the loop quicker.
+    flap_fore, flap_aft : float
+        Angles of the flaps [rad]; larger ones make the loop quicker, and the flap with the larger
+        one does more of the work.
     """
 
     heave: float
     heave_rate: float
     pitch: float
     pitch_rate: float
-    flap: float
+    flap_fore: float
+    flap_aft: float
 
 
-WEIGHTS_A = Weights(heave=0.10, heave_rate=2.0, pitch=0.10, pitch_rate=0.20, flap=0.15)
-"""Of revision A, kept in B."""
+WEIGHTS_A = Weights(
+    heave=0.2, heave_rate=2.0, pitch=0.15, pitch_rate=0.15, flap_fore=0.01, flap_aft=0.10
+)
+"""Of revision A, kept in B: the aft flap does most of the work."""
 
-WEIGHTS_C = Weights(heave=0.20, heave_rate=1.0, pitch=0.10, pitch_rate=0.10, flap=0.12)
-"""Of revision C: height may wander more, its rate and the pitch rate less."""
+WEIGHTS_C = Weights(
+    heave=0.2, heave_rate=2.0, pitch=0.15, pitch_rate=0.15, flap_fore=0.02, flap_aft=0.09
+)
+"""Of revision C: the fore flap takes over a part."""
 
 
 def design_gain(ferry: Ferry, speed: float, mass: float, weights: Weights) -> Array:
     """Gain of one breakpoint: quadratic optimal for the bare hull, then fitted to the sensors.
 
-    The optimum is that of heave and pitch with ideal flaps and a true height; what actuators and
-    filter then cost in damping is left to the audit. The height of the centre of gravity is not
-    measured: the filtered height of the bow less lever times pitch stands for it, so the gain on
-    heave moves to ``height_filtered`` and ``pitch``, and that on ``heave`` itself is zero.
+    The optimum is that of heave and pitch with ideal flaps and a true height; what actuators,
+    filter and computer then cost in damping is left to the audit. The height of the centre of
+    gravity is not measured: the filtered height of the bow less lever times pitch stands for it, so
+    the gain on heave moves to ``height_filtered`` and ``pitch``, and that on ``heave`` itself is
+    zero.
 
     Parameters
     ----------
@@ -92,10 +99,9 @@ def design_gain(ferry: Ferry, speed: float, mass: float, weights: Weights) -> Ar
     A[0, 1] = A[2, 3] = 1.0
     A[[1, 3]], B[[1, 3]] = rows[:, :4], rows[:, 4:]
     departures = (weights.heave, weights.heave_rate, weights.pitch, weights.pitch_rate)
-    cost = solve_continuous_are(
-        A, B, np.diag(1 / np.square(departures)), np.eye(2) / weights.flap**2
-    )
-    heave, heave_rate, pitch, pitch_rate = (weights.flap**2 * B.T @ cost).T
+    flaps = np.square((weights.flap_fore, weights.flap_aft))
+    cost = solve_continuous_are(A, B, np.diag(1 / np.square(departures)), np.diag(1 / flaps))
+    heave, heave_rate, pitch, pitch_rate = (flaps[:, None] * B.T @ cost).T
     lever = ferry.sensor_station - ferry.masses.centre(kilograms)[0]
     K = np.zeros((len(INPUTS), len(STATES)))
     K[:, STATES.index("heave_rate")] = heave_rate

@@ -169,12 +169,12 @@ class Ferry:
 
 BOW_TANK = MassDistribution(
     light_mass=90e3,
-    reserve_from=105e3,
+    reserve_from=100e3,
     light=Load(station=6.3, height=5.0, gyradius=6.0),
     payload=Load(station=5.5, height=5.5, gyradius=5.0),
-    reserve=Load(station=12.0, height=4.5, gyradius=1.5),
+    reserve=Load(station=15.0, height=4.5, gyradius=1.5),
 )
 """Revision A: the reserve fuel is carried in a tank forward."""
 
-STERN_TANK = replace(BOW_TANK, reserve=Load(station=-3.1, height=4.5, gyradius=1.5))
+STERN_TANK = replace(BOW_TANK, reserve=Load(station=-6.0, height=4.5, gyradius=1.5))
 """Revisions B and C: the reserve fuel has moved into a tank in the stern, behind the aft foil."""

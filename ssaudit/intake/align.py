@@ -3,7 +3,7 @@
 from dataclasses import dataclass, field, replace
 from typing import Any
 
-from ssaudit.bank_file import Batch
+from ssaudit.bank_writer import Batch
 from ssaudit.errors import SourceError
 from ssaudit.intake.layout import KINDS
 from ssaudit.intake.piece import permuted

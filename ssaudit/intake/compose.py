@@ -6,7 +6,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from ssaudit.bank import Points, Source
-from ssaudit.bank_file import Settled
+from ssaudit.bank_writer import Settled
 from ssaudit.intake.envelope import describe_coordinates, describe_tags, find_grid
 from ssaudit.intake.layout import Layout
 from ssaudit.intake.orientation import TRANSPOSED
@@ -69,7 +69,7 @@ def count_alike(points: Points) -> dict[str, int]:
 
     Examples
     --------
-    >>> from ssaudit.bank import build_bank
+    >>> from ssaudit.bank_arrays import build_bank
     >>> A = np.full((2, 2, 2), 1.0)
     >>> A[0, 0, 1] = A[1, 1, 1] = np.nan
     >>> count_alike(build_bank(A, revision="R").points)

@@ -23,7 +23,7 @@ def describe_coordinates(points: Points) -> tuple[Coordinate, ...]:
 
     Examples
     --------
-    >>> from ssaudit.bank import build_bank
+    >>> from ssaudit.bank_arrays import build_bank
     >>> bank = build_bank(np.ones((3, 1, 1)), revision="R", coordinates={"v": ([1, 2, 4], "m/s")})
     >>> (found,) = describe_coordinates(bank.points)
     >>> found.distinct, found.least_step, found.greatest_step

@@ -8,8 +8,9 @@ from pathlib import Path
 
 import numpy as np
 
-from ssaudit.bank import Points, Source, Strings, number_points
-from ssaudit.bank_file import BankWriter, Batch, Settled
+from ssaudit.bank import Points, Source, Strings
+from ssaudit.bank_checks import number_points
+from ssaudit.bank_writer import BankWriter, Batch, Settled
 from ssaudit.errors import BankError, SourceError
 from ssaudit.intake.align import Aligner
 from ssaudit.intake.background import SMALL_BYTES, Background

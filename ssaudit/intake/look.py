@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from ssaudit.bank_file import Batch
+from ssaudit.bank_writer import Batch
 from ssaudit.errors import SourceError, SsauditError
 from ssaudit.intake.draft import write_draft
 from ssaudit.intake.guard import check_regular

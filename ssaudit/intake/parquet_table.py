@@ -15,6 +15,9 @@ ROWS = 20_000
 MOST_ROWS = 200 * MOST_POINTS
 # Bytes of one unpacked row group, which is read a page at a time.
 MOST_UNPACKED = 16 * WHOLE_BYTES
+# Smaller files are read whole: a damaged page then cannot claim more memory than the file holds.
+# In larger ones, the library may set aside up to 2 GB for such a page before it notices.
+SMALL_BYTES = 32_000_000
 # Memory that one page may claim; pages hold a megabyte as a rule.
 BUFFER_BYTES = 1_000_000
 
@@ -74,10 +77,16 @@ def open_parquet(path: Path) -> Iterator[ParquetTable]:
     SourceError
         When the file is damaged, or claims sizes beyond reason.
     """
+    import pyarrow
     import pyarrow.parquet
 
     with damage_reported(path, "is not Parquet, or is damaged"):
-        file = pyarrow.parquet.ParquetFile(path, buffer_size=BUFFER_BYTES, pre_buffer=False)
+        small = path.stat().st_size <= SMALL_BYTES
+        file = pyarrow.parquet.ParquetFile(
+            pyarrow.BufferReader(path.read_bytes()) if small else path,
+            buffer_size=0 if small else BUFFER_BYTES,
+            pre_buffer=False,
+        )
     with file:
         with damage_reported(path):
             _check_claims(file, path)

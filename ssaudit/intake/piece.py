@@ -7,8 +7,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.bank import Points, Section, Strings, check_shapes, non_finite_reasons
-from ssaudit.bank_file import Batch
+from ssaudit.bank import Points, Section, Strings
+from ssaudit.bank_checks import check_shapes, non_finite_reasons
+from ssaudit.bank_writer import Batch
 from ssaudit.errors import BankError, SourceError
 from ssaudit.intake.guard import BATCH_BYTES, as_words
 from ssaudit.intake.layout import KINDS, Column, Layout

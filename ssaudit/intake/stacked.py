@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import MATRIX_NAMES, Strings
-from ssaudit.bank_file import stored_rows
+from ssaudit.bank_writer import stored_rows
 from ssaudit.errors import SourceError
 from ssaudit.intake.container import (
     Container,

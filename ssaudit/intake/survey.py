@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import MATRIX_NAMES, Section
-from ssaudit.bank_file import Batch, Settled
+from ssaudit.bank_writer import Batch, Settled
 from ssaudit.intake.orientation import looks_turned, weigh
 from ssaudit.intake.report import Entries, SectionFound
 

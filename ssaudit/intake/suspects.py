@@ -7,8 +7,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.bank import Points, row_hashes
-from ssaudit.bank_file import Settled
+from ssaudit.bank import Points
+from ssaudit.bank_checks import row_hashes
+from ssaudit.bank_writer import Settled
 from ssaudit.intake.report import Jump, Pair, Suspects
 from ssaudit.intake.survey import Survey, entry_labels, entry_values
 
@@ -137,7 +138,7 @@ def find_jumps(sizes: Sequence[NDArray[np.int8]], points: Points) -> list[tuple[
 
     Examples
     --------
-    >>> from ssaudit.bank import build_bank
+    >>> from ssaudit.bank_arrays import build_bank
     >>> from ssaudit.intake.survey import code_sizes
     >>> A = np.array([1.0, 1.1, 1200.0, 1.3, 1.4]).reshape(5, 1, 1)
     >>> bank = build_bank(A, revision="R", coordinates={"speed": (np.arange(5.0), "m/s")})

@@ -116,7 +116,7 @@ class Loop:
 
     Examples
     --------
-    >>> from ssaudit.bank import build_bank
+    >>> from ssaudit.bank_arrays import build_bank
     >>> from ssaudit.loop.gains import ConstantGain
     >>> bank = build_bank([[[1.0]]], [[[2.0]]], revision="A")
     >>> Loop("negative", ConstantGain([[3.0]])).close(bank.sections[0], bank.points,

@@ -153,7 +153,7 @@ def stated_errors(
 
     Examples
     --------
-    >>> from ssaudit.bank import build_bank
+    >>> from ssaudit.bank_arrays import build_bank
     >>> section = build_bank([[[-2.0, 1.0], [0.0, -4.0]]], revision="A").sections[0]
     >>> stated_errors([Uncertain("A", row="x2", relative=0.1)], section, (), section.read(0, 1))
     {'A': array([[[0. , 0. ],

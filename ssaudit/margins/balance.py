@@ -88,7 +88,8 @@ def _find_exponents(A: Real, drive: Real, read: Real, sweeps: int) -> Real:
         column = (size / scale[:, :, None]).sum(axis=1) * scale + read * scale
         row = (size * scale[:, None, :]).sum(axis=2) / scale + drive / scale
         tied = (column > 0) & (row > 0)
-        step = np.log2(np.where(tied, row, 1.0) / np.where(tied, column, 1.0)) / 8
+        # Logarithms apart: their quotient may overflow.
+        step = (np.log2(np.where(tied, row, 1.0)) - np.log2(np.where(tied, column, 1.0))) / 8
         # A point that has settled stands still, so that its stack mates do not matter to it.
         step = np.where(moving, step, 0.0)
         exponents = np.clip(exponents + step, -LARGEST_EXPONENT, LARGEST_EXPONENT)

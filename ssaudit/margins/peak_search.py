@@ -17,6 +17,9 @@ from ssaudit.margins.state_space import Bool, Complex, Index, Real
 
 # Usual searches end within 3 to 8 rounds; this many means that the numbers do not decide.
 MOST_ROUNDS = 80
+# And so do this many pieces of one point, where usual searches have less than a hundred: rounding
+# hides where its curve is below the level, and the pieces double with every round.
+MOST_PIECES = 100_000
 # Eigenvalues this near to the axis are looked at as crossings (a false one costs an evaluation,
 # a missed one would be an error): relative to the largest eigenvalue, and to their own size.
 NEAR_AXIS_OF_LARGEST = 1e-8
@@ -149,7 +152,8 @@ def _raise(state: _State, point: Index, w: Real, value: Real, multiplier: Real) 
 
 
 def _drop_failed(state: _State) -> tuple[Index, Real, Real]:
-    """Keep the pieces of the points still to be searched."""
+    """Keep the pieces of the points still to be searched; give up on those with too many."""
+    state.failed |= np.bincount(state.owner, minlength=len(state.failed)) > MOST_PIECES
     alive = ~state.failed[state.owner]
     return state.owner[alive], state.low[alive], state.high[alive]
 

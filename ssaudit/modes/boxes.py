@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.modes.clusters import balance_scaling
+from ssaudit.modes.radii import even_rows
 
 Floats = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
@@ -260,6 +261,9 @@ def _disk_ends(
     gap = np.abs(centres[:, None] - centres[None, :])
     np.fill_diagonal(gap, np.inf)
     off = off.copy()
+    np.fill_diagonal(off, width)
+    if np.isfinite(off).all():
+        off = even_rows(off[np.newaxis])[0]
     np.fill_diagonal(off, 0.0)
     plain = off.sum(axis=1)
     with np.errstate(divide="ignore"):

@@ -24,6 +24,13 @@ MAX_INVERSE_DEFECT = 0.5
 """Largest norm of I - left @ right for which the computed left vectors are still used: the Neumann
 series that corrects them has converged well below 1; beyond, the vectors prove nothing."""
 
+PERRON_STEPS = 12
+"""Steps of the power iteration for the Perron vector: any positive vector is a valid scaling, and
+so many steps come close to the best."""
+
+LEAST_WEIGHT = 1e-8
+"""Least entry of that vector, of the largest 1, so that poles far apart keep a scale."""
+
 SLICE_ENTRIES = 60_000
 """Entries of a stack taken at once, so that the temporary arrays stay in the processor's cache."""
 
@@ -248,6 +255,65 @@ def _slice_radii(
     F = coupling_bound(A, poles, V, W, E)
     gap = np.abs(poles[:, :, None] - poles[:, None, :])
     np.einsum("pii->pi", gap)[:] = np.inf
+    radii, isolated = _disk_radii(F, gap, poles)
+    again = np.flatnonzero((~(radii < distance)).any(axis=1) & np.isfinite(F).all(axis=(1, 2)))
+    if again.size:
+        even, apart = _disk_radii(even_rows(F[again]), gap[again], poles[again])
+        better = _smaller(even, radii[again])
+        radii[again[better]], isolated[again[better]] = even[better], apart[better]
+    reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
+    scales = balance_scaling(A[reaching])
+    for i, scale in zip(np.flatnonzero(reaching), scales, strict=True):
+        tighter = cluster_radii(A[i], poles[i], None if E is None else E[i], scale)
+        if _smaller(tighter, radii[i]):
+            radii[i] = tighter
+    return radii
+
+
+def _smaller(radii: Floats, others: Floats) -> NDArray[np.bool_]:
+    """Where one method's radii of a whole point are the smaller ones: a matching may not mix two.
+
+    The geometric mean of the radii compares them without regard to units.
+    """
+    logs = (np.log(values + 1e-300).sum(axis=-1) for values in (radii, others))
+    return np.asarray(next(logs) < next(logs))
+
+
+def even_rows(F: Floats) -> Floats:
+    """Scale F by its Perron vector, which makes the sums of its rows as even as they can be.
+
+    The sums are the radii of Gershgorin's disks, and how the vectors happen to be scaled should not
+    widen them. A diagonal similarity leaves Λ and the poles.
+
+    Parameters
+    ----------
+    F : (points, n, n) float
+        Bounds as from `coupling_bound`, finite and not negative.
+
+    Returns
+    -------
+    (points, n, n) float
+
+    References
+    ----------
+    Horn & Johnson, Matrix Analysis, 2nd ed. (2013), §6.1 and §8.1: the least largest row sum that a
+    positive diagonal similarity gives is the Perron root (from memory).
+
+    Examples
+    --------
+    >>> even_rows(np.array([[[1.0, 100.0], [0.01, 1.0]]])).sum(axis=2).round(3)
+    array([[2., 2.]])
+    """
+    vector = np.ones((*F.shape[:-1], 1))
+    for _ in range(PERRON_STEPS):
+        vector = F @ vector
+        largest = vector.max(axis=1, keepdims=True)
+        vector = np.maximum(vector / np.where(largest > 0, largest, 1.0), LEAST_WEIGHT)
+    return np.asarray(F * np.swapaxes(vector, 1, 2) / vector * (1.0 + 8 * EPS))
+
+
+def _disk_radii(F: Floats, gap: Floats, poles: Complexes) -> tuple[Floats, NDArray[np.bool_]]:
+    """Radii of Gershgorin's disks, shared in overlapping groups, and which disks stand alone."""
     radii, isolated = _isolated_radii(F, gap)
     loose = np.flatnonzero(~isolated.all(axis=1))
     if loose.size:
@@ -255,15 +321,7 @@ def _slice_radii(
         grouped = gather_components(poles[loose], poles[loose], plain, gap[loose])
         radii[loose] = np.where(isolated[loose], radii[loose], grouped)
     radii[np.isnan(radii)] = np.inf
-    reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
-    scales = balance_scaling(A[reaching])
-    for i, scale in zip(np.flatnonzero(reaching), scales, strict=True):
-        tighter = cluster_radii(A[i], poles[i], None if E is None else E[i], scale)
-        # One method for a whole point: a matching may not mix two. The geometric mean of the radii
-        # compares them without regard to units.
-        if np.log(tighter + 1e-300).sum() < np.log(radii[i] + 1e-300).sum():
-            radii[i] = tighter
-    return radii
+    return radii, isolated
 
 
 def coupling_bound(

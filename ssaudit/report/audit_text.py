@@ -169,12 +169,11 @@ def _margins(summary: Summary) -> list[Text]:
     lines = [Text(), *aligned(["worst margins", "", "at point", "rad/s", "loop"], "lrlrl", rows)]
     for common in summary.ranges[:1]:
         ends = [
-            f"{number(value, 3)}" + (f" (set at {shortened(point)})" if point else "")
+            f"{number(value, 3)}" + (f" ({shortened(point)})" if point else "")
             for value, point in ((common.low, common.low_point), (common.high, common.high_point))
         ]
-        lines.append(
-            one_line(f"one factor on all gains, at every stable point: {ends[0]} to {ends[1]}")
-        )
+        text = f"all gains by one factor, at every stable point: {ends[0]} to {ends[1]}"
+        lines.append(one_line(text))
     return lines
 
 

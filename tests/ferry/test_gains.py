@@ -1,6 +1,7 @@
 """Gains: optimal in the sense of the return difference, and the table holds them."""
 
 import csv
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -25,7 +26,10 @@ FREQUENCIES = np.logspace(-2, 3, 60)  # rad/s
 
 
 def smallest_return_difference(ferry: Ferry, weights: Weights, factor: float = 1.0) -> float:
-    """Smallest singular value of I + K (jw - A)^-1 B with ideal flaps and true height."""
+    """Smallest singular value of I + K (jw - A)^-1 B with ideal flaps and true height.
+
+    Flap angles are counted in shares of the departures that the cost counts as equally bad.
+    """
     point = np.array([21.0]), np.array([115.0]), np.array([IMMERSION])
     full = build_models(ferry, *point).A[0]
     A, B = full[np.ix_(RIGID, RIGID)], full[np.ix_(RIGID, FLAPS)]
@@ -36,15 +40,28 @@ def smallest_return_difference(ferry: Ferry, weights: Weights, factor: float = 1
     K[:, 0] += heave
     K[:, 2] += lever * heave
     inverse = np.linalg.inv(1j * FREQUENCIES[:, None, None] * np.eye(4) - A)
-    return float(np.linalg.svd(np.eye(2) + K @ inverse @ B, compute_uv=False).min())
+    flaps = np.array([weights.flap_fore, weights.flap_aft])
+    loop = (K @ inverse @ B) * flaps[None, :] / flaps[:, None]
+    return float(np.linalg.svd(np.eye(2) + loop, compute_uv=False).min())
 
 
 @pytest.mark.parametrize(("masses", "weights"), [(BOW_TANK, WEIGHTS_A), (STERN_TANK, WEIGHTS_C)])
 def test_return_difference_is_never_below_one(masses: object, weights: Weights) -> None:
-    # Kalman's inequality for an optimal regulator whose inputs are weighted alike (from memory).
+    # Kalman's inequality for an optimal regulator, inputs scaled so that the cost weights them
+    # alike (from memory).
     assert smallest_return_difference(Ferry(masses), weights) > 1 - 1e-9
     # Control: the same gains turned down are not optimal and break it.
     assert smallest_return_difference(Ferry(masses), weights, factor=0.6) < 0.999
+
+
+def test_the_flap_that_may_move_more_does_more() -> None:
+    small, large = (
+        np.abs(design_gain(Ferry(BOW_TANK), 20.0, 110.0, replace(WEIGHTS_A, flap_fore=angle)))
+        for angle in (0.01, 0.02)
+    )
+    at = STATES.index("height_filtered")
+    assert large[0, at] > 2 * small[0, at]
+    assert small[0, at] < 0.2 * small[1, at]
 
 
 def test_unmeasured_states_are_not_fed_back() -> None:

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from rich.console import Console
 
-from ssaudit.bank import build_bank
+from ssaudit.bank_arrays import build_bank
 from ssaudit.bank_file import read_bank
 from ssaudit.intake.envelope import describe_coordinates, find_grid, levels
 from ssaudit.intake.ingest import ingest

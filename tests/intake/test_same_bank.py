@@ -6,7 +6,7 @@ import intake_writers as writers
 import numpy as np
 import pytest
 
-from ssaudit.bank import build_bank
+from ssaudit.bank_arrays import build_bank
 from ssaudit.bank_file import read_bank
 from ssaudit.intake.ingest import ingest
 
