@@ -51,6 +51,11 @@ def arrow_array(column: NDArray[Any]) -> Any:
 def _words(column: NDArray[np.object_]) -> Any:
     import pyarrow as pa
 
+    if len(column) and column[0] is column[-1] and len(set(column)) == 1:
+        word = column[0].encode("utf-8", "replace")
+        every = np.arange(len(column) + 1, dtype=np.int32) * len(word)
+        buffers = [None, pa.py_buffer(every), pa.py_buffer(word * len(column))]
+        return pa.Array.from_buffers(pa.string(), len(column), buffers)
     joined = "".join(column).encode("utf-8", "replace")
     lengths = np.fromiter(map(len, column), dtype=np.int64, count=len(column))
     if len(joined) != lengths.sum():

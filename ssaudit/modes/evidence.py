@@ -124,13 +124,16 @@ def trace_disagrees(A: Floats, poles: Complexes) -> Flags:
     n = A.shape[-1]
     diagonal = np.einsum("pii->pi", A)
     gap = np.abs(poles.sum(axis=1) - diagonal.sum(axis=1))
-    sure = 4 * EPS * (np.abs(poles).sum(axis=1) + np.abs(diagonal).sum(axis=1))
+    size = np.abs(poles)
+    rounding = 4 * EPS * (size.sum(axis=1) + np.abs(diagonal).sum(axis=1))
+    # No scaling makes the norm smaller than that of the poles (Schur's inequality).
+    sure = rounding + TRACE_FACTOR * n * EPS * np.sqrt((size**2).sum(axis=1))
     disagrees: Flags = gap > sure
     rest = np.flatnonzero(disagrees)
     if rest.size:
         scale = balance_scaling(A[rest])
         norm = np.linalg.norm(A[rest] * scale[:, None, :] / scale[:, :, None], axis=(1, 2))
-        disagrees[rest] = gap[rest] > TRACE_FACTOR * n * EPS * norm + sure[rest]
+        disagrees[rest] = gap[rest] > TRACE_FACTOR * n * EPS * norm + rounding[rest]
     return disagrees
 
 
