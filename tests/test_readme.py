@@ -24,7 +24,8 @@ def folder(tmp_path, monkeypatch):
 
 def write_files(folder: Path) -> None:
     exec(blocks("python")[0], {})
-    loop, schedule, criteria, parts, compensator, uncertain = blocks("toml")
+    loop, schedule, criteria, parts, compensator, uncertain, pipeline = blocks("toml")
+    (folder / "pipeline.toml").write_text(pipeline)
     gainless = loop.split("[gain]")[0]
     (folder / "parts.toml").write_text(loop + parts + uncertain)
     (folder / "computer.toml").write_text(gainless + compensator)
@@ -49,6 +50,14 @@ def test_own_models_go_from_export_to_ledger(folder, capsys, loop):
     assert codes == [0, 0]
     assert "11 ok" in capsys.readouterr().out
     assert len(list((folder / "ledger").glob("run=*/points.parquet"))) == 1
+
+
+def test_pipeline_file_runs(folder, capsys):
+    write_files(folder)
+    assert main(["run", "pipeline.toml"]) == 0
+    shown = capsys.readouterr().out
+    assert "Drift from revision A to B" in shown
+    assert len(list((folder / "out" / "ledger").glob("run=*"))) == 2
 
 
 def test_python_example_gives_its_numbers(folder, capsys):
