@@ -239,6 +239,35 @@ def test_quick_sampling_costs_half_a_sample_and_what_it_is_late(late):
     assert gaps[1] < 0.02 * gaps[0]
 
 
+def test_sampled_compensator_by_direct_evaluation():
+    """u = -(c xc + d y), xc next a xc + b y: L is c b/(z - a) + d in series with the held plant."""
+    a, b, c, d, dt, late = 0.7, 0.2, 0.8, 0.9, 0.2, 1
+    A, B, C, _ = (M[0] for M in canonical([1.5], [1, 1.2, 0.3]))
+    plant = sampled_response(A, B, C, np.eye(1), dt, late)
+
+    def L(w):
+        return (d + c * b / (np.exp(1j * w * dt) - a)) * plant(w)
+
+    bank = ssaudit.build_bank(*canonical([1.5], [1, 1.2, 0.3]), revision="A")
+    gain = ssaudit.ConstantGain([[d, c], [b, a]], ("u1", "filter"), ("y1", "filter"))
+    loop = ssaudit.Loop(
+        "negative", gain, "outputs", compensator=("filter",), sampling=Sampling(dt, late)
+    )
+    found = ssaudit.audit(bank, loop, ssaudit.Criteria(), depth="margins")
+    assert found.points["verdict"][0] == "ok"
+    for name in ("input u1", "signal y1"):
+        row = loop_of(found, name)
+        w = row["phase_margin_frequency"]
+        assert abs(L(w)) == pytest.approx(1.0, rel=1e-10)
+        phase = abs(np.degrees(np.angle(-L(w))))
+        assert row["phase_margin_deg"] == pytest.approx(phase, rel=1e-9)
+        high = row["gain_factor_high_frequency"]
+        assert 1 / abs(L(high)) == pytest.approx(row["gain_factor_high"], rel=1e-9)
+        assert abs(np.angle(-L(high))) < 1e-8
+        assert abs(plant(w)) != pytest.approx(1.0, rel=1e-3)  # the control: not without the filter
+    assert set(found.loops["loop"]) == {"input u1", "signal y1"}
+
+
 POINTS = 15
 NAMES = ("a", "b", "c", "d")
 
@@ -246,7 +275,9 @@ NAMES = ("a", "b", "c", "d")
 def envelope():
     """Points of every kind: ok, lost, void, without feedback, and one with a hidden mode."""
     rng = np.random.default_rng(12)
-    A = rng.standard_normal((POINTS, 4, 4)) - np.linspace(0.5, 3.5, POINTS)[:, None, None] * np.eye(4)
+    A = rng.standard_normal((POINTS, 4, 4)) - np.linspace(0.5, 3.5, POINTS)[:, None, None] * np.eye(
+        4
+    )
     B, C = rng.standard_normal((POINTS, 4, 2)), rng.standard_normal((POINTS, 3, 4))
     D = 0.1 * rng.standard_normal((POINTS, 3, 2))
     A[4, 1, 2] = np.nan
@@ -318,7 +349,7 @@ def test_the_order_of_states_does_not_matter(whole):
     nearly(whole, audited(states=[2, 0, 3, 1]))
 
 
-def test_other_gains_are_other_margins(whole):
+def test_comparing_two_audits_can_fail(whole):
     """Negative control of the comparisons above."""
     changed = audited()
     changed.points["gain_margin_db"] *= 1 + 1e-5
@@ -572,3 +603,45 @@ def test_real_radius_by_the_command_line(project):
         assert worst["void"]["stability_radius"] is None
     assert rows[False]["real_stability_radius"].isna().all()
     assert rows[True]["real_stability_radius"].notna().tolist() == [True, False, False]
+
+
+@pytest.mark.parametrize("size", [1e100, 1e155, 1e300])
+@pytest.mark.parametrize("kind", ["large", "small", "graded"])
+def test_extreme_entries_end_in_a_verdict_without_a_warning(size, kind):
+    """Warnings are errors here: what overflows on the way is not known, and no more."""
+    A = {
+        "large": [[0.0, size], [-size, -size]],
+        "small": [[0.0, 1 / size], [-1 / size, -1 / size]],
+        "graded": [[0.0, size], [-4 / size, -0.8]],
+    }[kind]
+    bank = ssaudit.build_bank([A], [[[0.0], [1.0]]], [[[1.0, 0.0]]], [[[0.0]]], revision="A")
+    asked = ssaudit.Criteria((ssaudit.Requirement("gain", "gain_margin_db", at_least=6.0),))
+    for gain in (1.0, 1 / size):
+        loop = ssaudit.Loop("negative", ssaudit.ConstantGain([[gain]]), "outputs")
+        row = ssaudit.audit(bank, loop, asked, depth="margins").points.iloc[0]
+        assert row["verdict"] in ("ok", "short", "doubt")
+        if np.isnan(row["gain_margin_db"]):
+            assert row["verdict"] == "doubt"
+
+
+def test_a_search_that_rounding_keeps_alive_gives_up(monkeypatch):
+    """Pieces of the frequency axis double with every round where rounding hides the level."""
+    from ssaudit.margins import peak_search
+    from ssaudit.margins.real_radius import find_real_radius
+
+    longest = []
+    genuine = peak_search._drop_failed
+
+    def counting(state):
+        kept = genuine(state)
+        longest.append(len(kept[0]))
+        return kept
+
+    monkeypatch.setattr(peak_search, "_drop_failed", counting)
+    monkeypatch.setattr(peak_search, "MOST_PIECES", 300)
+    graded = np.array([[[0.0, 1e145], [-4e-145 - 1.0, -0.8]]])
+    with np.errstate(all="ignore"):
+        found = find_real_radius(graded)
+    assert not found.confirmed[0]
+    assert np.isnan(found.radius[0])
+    assert max(longest) <= 300

@@ -126,8 +126,8 @@ def trace_disagrees(A: Floats, poles: Complexes) -> Flags:
     gap = np.abs(poles.sum(axis=1) - diagonal.sum(axis=1))
     size = np.abs(poles)
     rounding = 4 * EPS * (size.sum(axis=1) + np.abs(diagonal).sum(axis=1))
-    # No scaling makes the norm smaller than that of the poles (Schur's inequality).
-    sure = rounding + TRACE_FACTOR * n * EPS * np.sqrt((size**2).sum(axis=1))
+    # No scaling makes the norm smaller than the largest pole.
+    sure = rounding + TRACE_FACTOR * n * EPS * size.max(axis=1, initial=0.0)
     disagrees: Flags = gap > sure
     rest = np.flatnonzero(disagrees)
     if rest.size:

@@ -137,7 +137,7 @@ def closed_loop_entry_error(
     if feed == "states" and digits is None and not errors:
         # By far the most frequent case: only the rounding of A + σBK itself.
         path = np.abs(B) @ np.abs(K)
-        total = EPS * ((inputs + signals + 3) * path + np.abs(A))
+        total = EPS * ((inputs + signals + 3) * path + np.abs(A) * (path > 0))
         return np.where(np.isnan(total), np.inf, total)
     dA, dB, dK = error("A", A), error("B", B), error("K", K, exact=True)
     fixed = feed == "states" or C is None
@@ -147,7 +147,8 @@ def closed_loop_entry_error(
         L, dL = _feed_through_error(K, dK, through, error("D", through), sign)
     wide, path = np.abs(output) + dC, np.abs(B) @ L @ np.abs(output)
     spread = dA + dB @ (L + dL) @ wide + np.abs(B) @ dL @ wide + np.abs(B) @ L @ dC
-    total = spread + EPS * ((inputs + signals + 3) * path + np.abs(A))
+    # Adding an exact zero rounds nothing.
+    total = spread + EPS * ((inputs + signals + 3) * path + np.abs(A) * (path > 0))
     return np.where(np.isnan(total), np.inf, total)
 
 

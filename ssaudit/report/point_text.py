@@ -34,10 +34,10 @@ def point_text(report: PointReport) -> RenderableType:
     rich renderable
     """
     row = report.row
-    where = ", ".join(
-        [place(report.at, report.units), *(f"{k} {printable(v)}" for k, v in report.tags.items())]
-    )
-    title = one_line(f"Point {report.point} of revision {row['revision']}: {where}", "bold")
+    where = [place(report.at, report.units)] if report.at else []
+    where += [f"{k} {printable(v)}" for k, v in report.tags.items()]
+    name = f"Point {report.point} of revision {row['revision']}"
+    title = one_line(": ".join([name, ", ".join(where)] if where else [name]), "bold")
     judged = Text.assemble(verdict(row["verdict"]), printable(f"  {row['reason']}".rstrip()))
     judged.no_wrap, judged.overflow = True, "ellipsis"
     parts: list[RenderableType] = [title, judged]

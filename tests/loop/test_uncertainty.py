@@ -166,7 +166,9 @@ def test_verdict_turns_to_doubt_where_the_uncertainty_reaches_the_axis(statement
 def test_uncertain_gains():
     def closed(relative):
         loop = ssaudit.Loop(
-            "negative", ssaudit.ConstantGain([[3.0]]), uncertain=(Uncertain("K", relative=relative),)
+            "negative",
+            ssaudit.ConstantGain([[3.0]]),
+            uncertain=(Uncertain("K", relative=relative),),
         )
         return verdict([[1.0]], B=[[1.0]], loop=loop)
 
@@ -266,7 +268,7 @@ def test_corners_of_a_small_box_reach_the_verdict():
     for size in (0.1, 0.3, 0.45, 0.6):
         stated = (Uncertain("A", "x1", "x2", size), Uncertain("A", "x2", "x1", size))
         corners = [
-            np.linalg.eigvals(A + [[0, size * p], [size * q, 0]]).real.max()
+            np.linalg.eigvals(A + size * np.array([[0, p], [q, 0]])).real.max()
             for p, q in product((-1, 1), repeat=2)
         ]
         found = verdict(A, *stated)["verdict"]
