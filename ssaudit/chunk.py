@@ -12,7 +12,8 @@ from ssaudit.columns import Columns, loop_columns, mode_columns, point_columns
 from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
 from ssaudit.distances import Distances, find_distances
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
-from ssaudit.loop.model import SIGNS, ClosedModels, Loop
+from ssaudit.loop.closing import ClosedModels
+from ssaudit.loop.model import SIGNS, Loop
 from ssaudit.modes.hidden import NO, UNKNOWN, YES
 from ssaudit.modes.neutral import neutral_states
 from ssaudit.modes.radii import closed_loop_entry_error, rounding_error

@@ -10,7 +10,7 @@ from ssaudit.bank import Points
 from ssaudit.criteria import Criteria
 from ssaudit.distances import Distances
 from ssaudit.judging import LOST, VERDICTS, VOID, Judgement, missed_names
-from ssaudit.loop.model import ClosedModels
+from ssaudit.loop.closing import ClosedModels
 from ssaudit.modes.participation import TOP, state_names
 from ssaudit.modes.quantities import (
     damping_ratio,

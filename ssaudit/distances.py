@@ -10,7 +10,8 @@ from numpy.typing import NDArray
 from ssaudit.bank import Matrices, Section
 from ssaudit.loop.assembly import OpenLoop
 from ssaudit.loop.breaking import break_loop
-from ssaudit.loop.model import SIGNS, ClosedModels, Loop
+from ssaudit.loop.closing import ClosedModels
+from ssaudit.loop.model import SIGNS, Loop
 from ssaudit.margins.disk import find_disk_margin
 from ssaudit.margins.gain_range import GainRange, find_gain_range
 from ssaudit.margins.loop_margins import LoopMargins, find_loop_margins

@@ -12,7 +12,8 @@ from ssaudit.chunk import Part, Settings, audit_chunk, named_rows
 from ssaudit.criteria import Criteria
 from ssaudit.distances import SingleLoop, break_without, find_distances, states_left_out
 from ssaudit.errors import SsauditError
-from ssaudit.loop.model import SIGNS, ClosedModels, Loop
+from ssaudit.loop.closing import ClosedModels
+from ssaudit.loop.model import SIGNS, Loop
 from ssaudit.margins.gain_range import StableGains, find_stable_gains
 from ssaudit.modes.gain_derivatives import damping_derivatives, pole_derivatives
 from ssaudit.modes.poles import find_modes

@@ -12,7 +12,7 @@ import ssaudit
 from ssaudit.bank import ModelBank, Points
 from ssaudit.errors import LoopError
 from ssaudit.loop import parts
-from ssaudit.loop.model import Sampling
+from ssaudit.loop.assembly import Sampling
 
 CLOSED = ssaudit.Loop("", None, "none")
 NOTHING = ssaudit.Criteria()

@@ -13,7 +13,7 @@ import ssaudit
 from ssaudit.criteria import POINT_QUANTITIES
 from ssaudit.errors import CriteriaError
 from ssaudit.loop import parts
-from ssaudit.loop.model import Sampling
+from ssaudit.loop.assembly import Sampling
 
 mpmath.mp.dps = 30
 

@@ -8,7 +8,7 @@ import pytest
 import ssaudit
 from ssaudit.errors import SsauditError
 from ssaudit.loop import parts
-from ssaudit.loop.model import Sampling
+from ssaudit.loop.assembly import Sampling
 from ssaudit.loop.uncertainty import Uncertain
 from ssaudit.point import CHANGE, MOST_GAINS, explain_point, find_point
 

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from ssaudit.errors import LoopError
 from ssaudit.loop.parts import Path
 
 Floats = NDArray[np.float64]
@@ -13,6 +14,32 @@ EPS = float(np.finfo(float).eps)
 # Units of roundoff per entry that a matrix exponential by scaling and squaring may lose, against
 # the exponential of the entries' sizes (Higham, Functions of Matrices (2008), §10.3, from memory).
 EXPONENTIAL_ROUNDOFFS = 100.0
+
+
+# A computer seldom takes longer than this to answer; more samples are a slip.
+MOST_LATE = 100
+
+
+@dataclass(frozen=True)
+class Sampling:
+    """How a computer closes the loop of continuous models: commands held between samples.
+
+    Parameters
+    ----------
+    dt : float
+        Sampling time [s], positive.
+    late : int
+        Samples from reading the signals to giving the command.
+    """
+
+    dt: float
+    late: int = 0
+
+    def __post_init__(self) -> None:
+        if not 0 < self.dt < np.inf:
+            raise LoopError(f"the sampling time is {self.dt:g} s, not positive")
+        if not 0 <= self.late <= MOST_LATE:
+            raise LoopError(f"late is {self.late} samples, not 0 to {MOST_LATE}")
 
 
 @dataclass(frozen=True, eq=False)

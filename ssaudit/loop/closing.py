@@ -1,14 +1,55 @@
 """Closing the models: stacked A, B, C, D and gains to the closed-loop state matrices."""
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
+from ssaudit.loop.assembly import OpenLoop
 from ssaudit.modes.poles import isolate
 
 Array = NDArray[np.float64]
 # I - σKD counts as singular when its reciprocal condition number, in the best of units, is below
 # this many units of roundoff a row: the closed loop would have no correct digit.
 SINGULAR_ROUNDOFFS = 4.0
+
+
+@dataclass(frozen=True, eq=False)
+class ClosedModels:
+    """Closed-loop models of some points.
+
+    Attributes
+    ----------
+    A : (points, n, n) float
+        Closed-loop state matrices; zero where a point is void.
+    void : (points,) object
+        Why a point could not be closed or used, as str; "" where it was.
+    held : (points,) bool
+        Where the gain table's edge value was held.
+    K : (points or 1, inputs, signals) float or None
+        Gains as they close ``open``; None for models that come closed.
+    open : OpenLoop or None
+        What the gains close, where it is more than the plant: parts, sampling, compensator.
+    states : tuple of str
+        Names of the states of A.
+    dt : float
+        Sampling time [s] of A; 0 when continuous.
+    """
+
+    A: Array
+    void: NDArray[np.object_]
+    held: NDArray[np.bool_]
+    K: Array | None = None
+    open: OpenLoop | None = None
+    states: tuple[str, ...] = ()
+    dt: float = 0.0
+
+    def at(self, rows: NDArray[np.int64]) -> "ClosedModels":
+        """Return the models of some points."""
+        K = self.K if self.K is None or len(self.K) == 1 else self.K[rows]
+        opened = None if self.open is None else self.open.at(rows)
+        of_points = (self.A[rows], self.void[rows], self.held[rows])
+        return ClosedModels(*of_points, K, opened, self.states, self.dt)
 
 
 def close_state_feedback(A: Array, B: Array, K: Array, sign: int) -> Array:

@@ -233,6 +233,34 @@ class GainSchedule:
 Gain = ConstantGain | GainSchedule
 
 
+def arrange(
+    K: NDArray[np.float64], gain: Gain, inputs: Sequence[str], signals: Sequence[str]
+) -> NDArray[np.float64]:
+    """Put named gains in the order of a section; what they do not name gets no feedback.
+
+    Parameters
+    ----------
+    K : (points, rows, columns) float
+        Gains as the loop states them.
+    gain : ConstantGain or GainSchedule
+        Names of their rows and columns; None where they are the section's own.
+    inputs, signals : sequence of str
+        Names of the section's inputs and fed-back signals.
+
+    Returns
+    -------
+    (points, inputs, signals) float
+    """
+    rows, columns = tuple(gain.inputs or inputs), tuple(gain.signals or signals)
+    if (rows, columns) == (tuple(inputs), tuple(signals)):
+        return K
+    arranged = np.zeros((len(K), len(inputs), len(signals)))
+    row_of = np.array([list(inputs).index(name) for name in rows])
+    column_of = np.array([list(signals).index(name) for name in columns])
+    arranged[:, row_of[:, np.newaxis], column_of] = K
+    return arranged
+
+
 def _cell(
     values: NDArray[np.float64], grid: NDArray[np.float64]
 ) -> tuple[NDArray[np.int64], NDArray[np.float64]]:

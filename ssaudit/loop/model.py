@@ -9,80 +9,24 @@ from numpy.typing import NDArray
 
 from ssaudit.bank import Matrices, ModelBank, Points, Section
 from ssaudit.errors import LoopError
-from ssaudit.loop.assembly import OpenLoop, insert_parts, sample, with_controller_states
-from ssaudit.loop.closing import close_output_feedback, close_state_feedback
-from ssaudit.loop.gains import Gain
+from ssaudit.loop.assembly import (
+    OpenLoop,
+    Sampling,
+    insert_parts,
+    sample,
+    with_controller_states,
+)
+from ssaudit.loop.closing import ClosedModels, close_output_feedback, close_state_feedback
+from ssaudit.loop.fitting import find_misfit
+from ssaudit.loop.gains import Gain, arrange
 from ssaudit.loop.parts import EVERY, Part, chain
-from ssaudit.loop.uncertainty import Uncertain, misfit_of, stated_errors
+from ssaudit.loop.uncertainty import Uncertain, stated_errors
 from ssaudit.modes.radii import rounding_error
 from ssaudit.settings import nearest
 
 Floats = NDArray[np.float64]
 SIGNS = {"negative": -1, "positive": 1}
 FEEDS = ("states", "outputs", "none")
-NEEDED = {"states": ("A", "B"), "outputs": ("A", "B", "C", "D"), "none": ("A",)}
-# A computer seldom takes longer than this to answer; more samples are a slip.
-MOST_LATE = 100
-
-
-@dataclass(frozen=True)
-class Sampling:
-    """How a computer closes the loop of continuous models: commands held between samples.
-
-    Parameters
-    ----------
-    dt : float
-        Sampling time [s], positive.
-    late : int
-        Samples from reading the signals to giving the command.
-    """
-
-    dt: float
-    late: int = 0
-
-    def __post_init__(self) -> None:
-        if not 0 < self.dt < np.inf:
-            raise LoopError(f"the sampling time is {self.dt:g} s, not positive")
-        if not 0 <= self.late <= MOST_LATE:
-            raise LoopError(f"late is {self.late} samples, not 0 to {MOST_LATE}")
-
-
-@dataclass(frozen=True, eq=False)
-class ClosedModels:
-    """Closed-loop models of some points.
-
-    Attributes
-    ----------
-    A : (points, n, n) float
-        Closed-loop state matrices; zero where a point is void.
-    void : (points,) object
-        Why a point could not be closed or used, as str; "" where it was.
-    held : (points,) bool
-        Where the gain table's edge value was held.
-    K : (points or 1, inputs, signals) float or None
-        Gains as they close ``open``; None for models that come closed.
-    open : OpenLoop or None
-        What the gains close, where it is more than the plant: parts, sampling, compensator.
-    states : tuple of str
-        Names of the states of A.
-    dt : float
-        Sampling time [s] of A; 0 when continuous.
-    """
-
-    A: Floats
-    void: NDArray[np.object_]
-    held: NDArray[np.bool_]
-    K: Floats | None = None
-    open: OpenLoop | None = None
-    states: tuple[str, ...] = ()
-    dt: float = 0.0
-
-    def at(self, rows: NDArray[np.int64]) -> "ClosedModels":
-        """Return the models of some points."""
-        K = self.K if self.K is None or len(self.K) == 1 else self.K[rows]
-        opened = None if self.open is None else self.open.at(rows)
-        of_points = (self.A[rows], self.void[rows], self.held[rows])
-        return ClosedModels(*of_points, K, opened, self.states, self.dt)
 
 
 @dataclass(frozen=True, eq=False)
@@ -208,7 +152,7 @@ class Loop:
         """
         count, n = len(points), len(section.states)
         void = points.void.copy()
-        reason = "" if not n else self.misfit(section)
+        reason = "" if not n else find_misfit(self, section)
         if reason:
             void[void == ""] = reason
         usable = void == ""
@@ -330,51 +274,6 @@ class Loop:
         finite = np.isfinite(D).all(axis=(1, 2), keepdims=True)
         return close_output_feedback(A, B, C, np.where(finite, D, 0.0), K, sign)
 
-    def misfit(self, section: Section) -> str:
-        """Why a section cannot be closed, "" when it can."""
-        missing = [name for name in NEEDED[self.feed] if name not in section.matrices]
-        if missing:
-            return f"{missing[0]} is missing, and feed = {self.feed!r} needs it"
-        signals = self.signals(section)
-        for statement in self.uncertain:
-            misfit = misfit_of(statement, section, signals)
-            if misfit:
-                return misfit
-        if self.gain is None:
-            return ""
-        if not self.plain:
-            misfit = self._misfit_of_path(section)
-            if misfit:
-                return misfit
-        extra = self.compensator
-        for kind, named, valid, size in (
-            ("input", self.gain.inputs, (*section.inputs, *extra), 0),
-            (self.feed.removesuffix("s"), self.gain.signals, (*signals, *extra), 1),
-        ):
-            misfit = _misfit_of_names(self.gain, kind, named, valid, size)
-            if misfit:
-                return misfit
-        return ""
-
-    def _misfit_of_path(self, section: Section) -> str:
-        """Why parts, sampling or compensator do not fit a section."""
-        continuous = bool(self.sampling) or bool(self.parts)
-        if section.dt > 0 and continuous:
-            return "parts and sampling are for continuous models; these are sampled"
-        if "E" in section.matrices and self.sampling:
-            return "descriptor models cannot be sampled"
-        for part in self.parts:
-            side, valid = (
-                ("input", section.inputs) if part.input else ("signal", self.signals(section))
-            )
-            place = part.input or part.signal
-            if place != EVERY and place not in valid:
-                return f"part {part.name!r} names no {side}: {place!r}; {nearest(place, valid)}"
-        for name in self.compensator:
-            if name in section.inputs or name in self.signals(section):
-                return f"the compensator's state {name!r} has the name of an input or a signal"
-        return ""
-
     def channels(self, section: Section) -> tuple[list[int], list[int]]:
         """Numbers of the inputs that some gain drives, and of the signals that some gain uses.
 
@@ -440,56 +339,6 @@ class Loop:
                     where=self.name,
                     do=nearest(variable, bank.points.coordinates),
                 )
-        misfits = [self.misfit(section) for section in bank.sections if section.states]
+        misfits = [find_misfit(self, section) for section in bank.sections if section.states]
         if all(misfits):
             raise LoopError(misfits[0] if misfits else "no model to close", where=self.name)
-
-
-def _misfit_of_names(
-    gain: Gain, kind: str, named: tuple[str, ...] | None, valid: tuple[str, ...], axis: int
-) -> str:
-    """Why the names of a gain's rows or columns do not fit those of the models."""
-    if named is None:
-        found = gain.matrix.shape[axis]  # type: ignore[union-attr]
-        if found == len(valid):
-            return ""
-        names = ", ".join(valid)
-        return f"the gain matrix is for {found} {kind}s, the models have {len(valid)}: {names}"
-    for name in named:
-        if name not in valid:
-            return f"the gain names {name!r}, no {kind} here: {nearest(name, valid)}"
-    missing = [name for name in valid if name not in named]
-    if missing and gain.unnamed == "refuse":
-        return (
-            f"the gain does not name the {kind} {missing[0]!r}; name all of "
-            f'{", ".join(valid)}, or set unnamed = "zero" in [gain]'
-        )
-    return ""
-
-
-def arrange(
-    K: NDArray[np.float64], gain: Gain, inputs: Sequence[str], signals: Sequence[str]
-) -> NDArray[np.float64]:
-    """Put named gains in the order of a section; what they do not name gets no feedback.
-
-    Parameters
-    ----------
-    K : (points, rows, columns) float
-        Gains as the loop states them.
-    gain : ConstantGain or GainSchedule
-        Names of their rows and columns; None where they are the section's own.
-    inputs, signals : sequence of str
-        Names of the section's inputs and fed-back signals.
-
-    Returns
-    -------
-    (points, inputs, signals) float
-    """
-    rows, columns = tuple(gain.inputs or inputs), tuple(gain.signals or signals)
-    if (rows, columns) == (tuple(inputs), tuple(signals)):
-        return K
-    arranged = np.zeros((len(K), len(inputs), len(signals)))
-    row_of = np.array([list(inputs).index(name) for name in rows])
-    column_of = np.array([list(signals).index(name) for name in columns])
-    arranged[:, row_of[:, np.newaxis], column_of] = K
-    return arranged

@@ -8,8 +8,8 @@ from numpy.typing import NDArray
 
 from ssaudit.errors import LoopError
 from ssaudit.loop import parts as kinds
+from ssaudit.loop.assembly import Sampling
 from ssaudit.loop.gains import ConstantGain
-from ssaudit.loop.model import Sampling
 from ssaudit.settings import check_keys, is_finite_number, take, take_words
 
 Table = dict[str, Any]

@@ -9,8 +9,7 @@ import ssaudit
 from ssaudit import ConstantGain, Criteria, Loop
 from ssaudit.errors import LoopError
 from ssaudit.loop import parts
-from ssaudit.loop.assembly import OpenLoop, insert_parts, sample, with_controller_states
-from ssaudit.loop.model import Sampling
+from ssaudit.loop.assembly import OpenLoop, Sampling, insert_parts, sample, with_controller_states
 
 RNG = np.random.default_rng(5)
 

@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 import ssaudit
 from ssaudit.bank import ModelBank
 from ssaudit.errors import LoopError
-from ssaudit.loop.model import ClosedModels, Loop
+from ssaudit.loop.closing import ClosedModels
+from ssaudit.loop.model import Loop
 
 Floats = NDArray[np.float64]
 STATES, INPUTS, OUTPUTS = ("heave", "pitch", "rate"), ("flap", "rudder"), ("height", "angle")

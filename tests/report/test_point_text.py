@@ -9,7 +9,7 @@ from rich.console import Console
 
 import ssaudit
 from ssaudit.loop import parts
-from ssaudit.loop.model import Sampling
+from ssaudit.loop.assembly import Sampling
 from ssaudit.loop.uncertainty import Uncertain
 from ssaudit.point import explain_point
 from ssaudit.report.point_text import MOST_MODES, point_text
