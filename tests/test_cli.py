@@ -222,10 +222,10 @@ class TestWhatIsShown:
                             coordinates={"speed": ([10.0, 11.0, 12.0, 13.0], "m/s")})  # fmt: skip
         text = project.audit(bank).out
         assert re.search(
-            r"\n +1 +0\.200 +stability: all poles decay\n +within speed 13 m/s\n", text
+            r"\n +1 +0\.200 +stability: all poles decay\n +worst at 4; within speed 13 m/s\n", text
         )
         assert re.search(
-            r"\n +3 +-0\.100 +ride: damping_ratio ≥ 0\.2\n +within speed 11 to 13 m/s\n", text
+            r"\n +3 +-0\.100 +ride: damping_ratio ≥ 0\.2\n +worst at 4; within speed 11 to 13 m/s\n", text
         )
 
     def test_of_many_requirements_those_that_are_missed_most_are_shown(self, project):

@@ -142,7 +142,9 @@ def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
     for missed, line in zip(shown, lines[1:], strict=True):
         table.append(line)
         if missed.points:
-            table.append(one_line(f"    {_within(missed.between, summary.between, units)}", "dim"))
+            where = _within(missed.between, summary.between, units)
+            worst = shortened(missed.worst_point)
+            table.append(one_line(f"    worst at {worst}; {where}", "dim"))
     more = len(summary.missed) - len(shown)
     return [*table, one_line(f"and {more} more requirements: --json")] if more else table
 

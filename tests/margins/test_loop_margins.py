@@ -9,7 +9,7 @@ from ssaudit.margins.loop_margins import find_loop_margins
 from ssaudit.margins.state_space import StateSpace
 
 LONG = os.environ.get("SSAUDIT_LONG") == "1"
-LOOPS = 2000 if LONG else 200
+LOOPS = 20_000 if LONG else 2000
 
 
 def second_order(zeta, wn):

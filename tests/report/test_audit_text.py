@@ -66,7 +66,7 @@ def test_where_a_requirement_is_missed_by_the_coordinates_that_tell(oscillators)
 
     def within(damping):
         (line,) = (
-            line.strip()
+            line.strip().partition("; ")[2]
             for line in lines(audited(oscillators(damping, coordinates=at)))
             if "within" in line or "all over" in line
         )
