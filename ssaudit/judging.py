@@ -205,7 +205,9 @@ def _judge_stability(
     rows = np.flatnonzero(doubt)
     at = modes.s.real[rows, worst[rows]]
     off = modes.radius[rows, worst[rows]]
-    reason[rows] = _join("stability: real part ", "%.3g", at, " ± ", "%.1g", off, " 1/s reaches 0")
+    reason[rows] = _join(
+        "stability: real part ", "%.3g", at, " ± ", "%.2g", _up(off), " 1/s reaches 0"
+    )
     return np.asarray(doubt)
 
 
@@ -327,9 +329,17 @@ def _doubt_reasons(
 ) -> NDArray[np.object_]:
     head = f"{requirement.name}: {requirement.quantity} "
     tail = f" {requirement.unit}".rstrip() + f" against {requirement.limits}"
-    texts = _join(head, "%.4g", result.value[rows], " ± ", "%.1g", result.spread[rows], tail)
+    texts = _join(head, "%.4g", result.value[rows], " ± ", "%.2g", _up(result.spread[rows]), tail)
     texts[np.isnan(result.value[rows])] = f"{head}is not decided by the numbers"
     return texts
+
+
+def _up(spread: Floats) -> Floats:
+    """Round up to two significant digits, so that what is shown still reaches the limit."""
+    with np.errstate(all="ignore"):
+        unit = 10.0 ** (np.floor(np.log10(spread)) - 1)
+        rounded = np.ceil(spread / unit * (1 - 1e-12)) * unit
+    return np.asarray(np.where(np.isfinite(rounded) & (spread > 0), rounded, spread))
 
 
 def _join(*parts: str | Floats) -> NDArray[np.object_]:

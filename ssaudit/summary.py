@@ -14,6 +14,9 @@ from ssaudit.judging import VERDICTS
 Columns = Mapping[str, NDArray[Any]]
 # Reasons for void points that are told apart; the rest is counted together.
 MOST_REASONS = 1000
+# Points in doubt, and of each outcome of a proof, that are named.
+MOST_NAMED = 20
+OUTCOMES = ("stable", "unstable", "open")
 
 
 @dataclass(frozen=True)
@@ -28,19 +31,22 @@ class Missed:
         What it asks for, with quantity and unit.
     points : int
         How many points miss it.
+    judged : int
+        How many points were judged by it: it may apply to none, or not be defined at any.
     worst_point : str
-        The point that misses it by most; "" when none does.
+        The point that misses it by most, or meets it by least; "" when none was judged.
     worst_value : float
         The quantity there.
     at : dict of float
         Coordinates there.
     between : dict of (low, high)
-        Ranges of the coordinates of all points that miss it.
+        Ranges of the coordinates of all points that miss it; empty when none does.
     """
 
     name: str
     limits: str
     points: int
+    judged: int
     worst_point: str
     worst_value: float
     at: Mapping[str, float]
@@ -142,6 +148,8 @@ class Summary:
         Points in doubt about a requirement, where the criteria let that count as ok.
     proofs : dict of int
         Points by outcome of their proof: stable, unstable, open; empty when none was asked for.
+    named : dict of tuple
+        The first points in doubt ("doubt"), and with each outcome of a proof.
     nearest : tuple of Nearest
         The worst of each margin; empty unless depth was margins.
     ranges : tuple of CommonRange
@@ -160,6 +168,7 @@ class Summary:
     between: Mapping[str, tuple[float, float]]
     tolerated: int
     proofs: Mapping[str, int]
+    named: Mapping[str, tuple[str, ...]]
     nearest: tuple[Nearest, ...]
     ranges: tuple[CommonRange, ...]
     max_real: float
@@ -198,6 +207,7 @@ class Tally:
         self._worst: list[tuple[tuple[float, float, int], dict[str, Any]]] = []
         size = 1 + len(criteria.requirements)
         self._missed = np.zeros(size, dtype=np.int64)
+        self._judged = np.zeros(size, dtype=np.int64)
         self._missed_by = np.full(size, -np.inf)
         self._missed_at: list[tuple[str, float, dict[str, float]]] = [("", np.nan, {})] * size
         self._between: list[dict[str, tuple[float, float]]] = [{} for _ in range(size)]
@@ -205,6 +215,7 @@ class Tally:
         self._held = self._tolerated = 0
         self._ranges: dict[str, CommonRange] = {}
         self._nearest: dict[str, Nearest] = {}
+        self._named: dict[str, list[str]] = {}
         self._proofs: Counter[str] = Counter()
         self._extremes = (np.nan, np.nan)
         self._seen = 0
@@ -255,8 +266,11 @@ class Tally:
         if self._criteria.doubt == "ok":
             grave = np.isin(points["doubt"], ["", STABILITY, CROSS_CHECK])
             self._tolerated += int(np.count_nonzero((verdicts == "doubt") & ~grave))
+        self._name("doubt", points["point"][verdicts == "doubt"])
         if "proof" in points:
             self._proofs.update(outcome for outcome in points["proof"] if outcome)
+            for outcome in OUTCOMES:
+                self._name(outcome, points["point"][points["proof"] == outcome])
         for name in POINT_QUANTITIES:
             if name in points:
                 self._add_nearest(name, points)
@@ -275,6 +289,10 @@ class Tally:
             float(np.fmin.reduce(points["min_damping"][judged], initial=self._extremes[1])),
         )
         self._seen += len(verdicts)
+
+    def _name(self, what: str, points: NDArray[Any]) -> None:
+        room = MOST_NAMED - len(self._named.setdefault(what, []))
+        self._named[what] += [str(point) for point in points[:room]]
 
     def _add_void(self, reasons: NDArray[Any]) -> None:
         for reason, count in Counter(reasons.tolist()).items():
@@ -305,10 +323,14 @@ class Tally:
     ) -> None:
         rows = np.flatnonzero(missed)
         self._missed[place] += len(rows)
-        if not len(rows):
-            return
         _widen(self._between[place], points, rows)
-        row = rows[np.argmax(by[rows])]
+        judged = np.flatnonzero(~np.isnan(value) & (points["verdict"] != "void"))
+        self._judged[place] += len(judged)
+        # Of those that miss it the worst, else the one that is nearest to missing it.
+        among = rows if len(rows) else judged
+        if not len(among):
+            return
+        row = among[np.argmax(by[among])]
         if by[row] > self._missed_by[place]:
             self._missed_by[place] = by[row]
             at = {n[3:]: float(points[n][row]) for n in points if n.startswith("at_")}
@@ -350,9 +372,9 @@ class Tally:
             asked = f"{requirement.quantity} {requirement.limits} {requirement.unit}".rstrip()
             names.append((requirement.name, asked))
         missed = tuple(
-            Missed(name, limits, int(count), point, value, at, between)
-            for (name, limits), count, (point, value, at), between in zip(
-                names, self._missed, self._missed_at, self._between, strict=True
+            Missed(name, limits, int(count), int(judged), point, value, at, between)
+            for (name, limits), count, judged, (point, value, at), between in zip(
+                names, self._missed, self._judged, self._missed_at, self._between, strict=True
             )
         )
         return Summary(
@@ -365,6 +387,7 @@ class Tally:
             self._all_between,
             self._tolerated,
             dict(self._proofs),
+            {what: tuple(points) for what, points in self._named.items()},
             tuple(self._nearest.values()),
             tuple(self._ranges.values()),
             *self._extremes,

@@ -86,7 +86,9 @@ def test_what_is_missed_by_how_many_and_worst_where() -> None:
     assert (decay.worst_point, decay.worst_value) == ("p5", 7.0)
     assert decay.between == {"speed": (15.0, 40.0)}
     assert (slow.name, slow.limits, slow.points) == ("slow", "time_constant ≥ 0.1 s", 3)
-    assert summarise([-2.0], [1.0]).missed[1].worst_point == ""
+    # What no point misses still says which comes nearest to it.
+    met = summarise([-2.0], [1.0]).missed[1]
+    assert (met.points, met.judged, met.worst_point, met.worst_value) == (0, 1, "p0", -2.0)
 
 
 def test_ranges_are_those_of_all_judged_points() -> None:

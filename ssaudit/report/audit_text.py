@@ -12,6 +12,7 @@ from ssaudit.report.words import (
     aligned,
     cautions,
     counts,
+    inward,
     number,
     one_line,
     pole,
@@ -21,8 +22,11 @@ from ssaudit.report.words import (
 from ssaudit.stages import AuditReport
 from ssaudit.summary import Summary
 
-# Requirements and reasons for void points that are shown; fewer where margins need the room.
-MOST_REQUIREMENTS, MOST_REASONS = 4, 2
+# Lines of requirements, and reasons for void points; fewer where margins need the room.
+REQUIREMENT_LINES, MOST_REASONS = 8, 2
+MARGIN_LINES, LEAST_LINES = 2, 4
+# Points in doubt or proved that are named.
+MOST_NAMED = 4
 LONGEST_ID = 24
 # Of each kind of margin one, so that the screen stays short; the others are in the ledger.
 SHOWN_MARGINS = (
@@ -51,7 +55,7 @@ def audit_text(report: AuditReport) -> RenderableType:
     summary, units = report.summary, report.about["units"]
     title = f"Audit of revision {summary.revision}: {summary.total} points"
     parts: list[RenderableType] = [one_line(title, "bold"), counts(summary.counts)]
-    parts += [*_proofs(summary), Text()]
+    parts += [*_named(summary), Text()]
     if summary.worst:
         parts += [*_worst(summary, units), Text()]
     parts += [*_missed(summary, units), *_margins(summary), *_void(summary), Text()]
@@ -59,12 +63,17 @@ def audit_text(report: AuditReport) -> RenderableType:
     return Group(*parts)
 
 
-def _proofs(summary: Summary) -> list[Text]:
+def _named(summary: Summary) -> list[Text]:
+    """Name the points in doubt, and those that a proof was about."""
     lines = []
-    if summary.proofs:
-        named = {"stable": "proved stable", "unstable": "proved unstable", "open": "open"}
-        found = [f"{summary.proofs.get(key, 0)} {words}" for key, words in named.items()]
-        lines.append(one_line("proofs: " + "   ".join(found)))
+    proofs = {"stable": "proved stable", "unstable": "proved unstable", "open": "proof open"}
+    counted = {"doubt": ("in doubt", summary.counts["doubt"])}
+    counted |= {key: (words, summary.proofs.get(key, 0)) for key, words in proofs.items()}
+    for key, (words, count) in counted.items():
+        if count:
+            points = summary.named.get(key, ())[:MOST_NAMED]
+            more = f" and {count - len(points)} more" if count > len(points) else ""
+            lines.append(one_line(f"{count} {words}: {', '.join(map(shortened, points))}{more}"))
     if summary.tolerated:
         lines.append(one_line(f"{summary.tolerated} in doubt about a requirement, let pass as ok"))
     return lines
@@ -124,29 +133,33 @@ def participating(point: Mapping[str, Any]) -> dict[str, float]:
 
 def _missed(summary: Summary, units: Mapping[str, str]) -> list[Text]:
     """Give each requirement a line, and another that says where, if it is missed anywhere."""
-    # Stability and, of too many, those that are missed at most points, in the order of the file.
-    stability, *asked = summary.missed
-    room = MOST_REQUIREMENTS - 1 - bool(summary.nearest)
-    most = sorted(asked, key=lambda missed: -missed.points)[:room]
-    shown = [stability, *(missed for missed in asked if missed in most)]
+    # Of too many, those that are missed at most points; in the order of the file.
+    room = REQUIREMENT_LINES - MARGIN_LINES * bool(summary.nearest) - len(_named(summary))
+    room = max(room, LEAST_LINES)
+    most = sorted(summary.missed, key=lambda missed: -missed.points)[:room]
+    shown = [missed for missed in summary.missed if missed in most]
     rows: list[list[str | Text]] = [
         [
             Text(str(missed.points), style="" if missed.points else "dim"),
-            number(missed.worst_value, 3) if missed.points else "",
-            f"{missed.name}: {missed.limits}",
+            f"of {missed.judged}",
+            number(missed.worst_value, 3),
+            f"{missed.name}: {missed.limits}" + ("" if missed.judged else "  (judged at no point)"),
         ]
         for missed in shown
     ]
-    lines = aligned(["missed at", "worst", "requirement"], "rrl", rows)
+    lines = aligned(["missed", "at", "worst", "requirement"], "rlrl", rows)
     table = [lines[0]]
     for missed, line in zip(shown, lines[1:], strict=True):
         table.append(line)
-        if missed.points:
+        # Where, as long as there is room for every requirement.
+        if missed.points and len(shown) < room:
+            room -= 1
             where = _within(missed.between, summary.between, units)
             worst = shortened(missed.worst_point)
             table.append(one_line(f"    worst at {worst}; {where}", "dim"))
     more = len(summary.missed) - len(shown)
-    return [*table, one_line(f"and {more} more requirements: --json")] if more else table
+    plural = "s" * (more > 1)
+    return [*table, one_line(f"and {more} more requirement{plural}: --json")] if more else table
 
 
 def _margins(summary: Summary) -> list[Text]:
@@ -171,8 +184,11 @@ def _margins(summary: Summary) -> list[Text]:
     lines = [Text(), *aligned(["worst margins", "", "at point", "rad/s", "loop"], "lrlrl", rows)]
     for common in summary.ranges[:1]:
         ends = [
-            f"{number(value, 3)}" + (f" ({shortened(point)})" if point else "")
-            for value, point in ((common.low, common.low_point), (common.high, common.high_point))
+            inward(value, up) + (f" ({shortened(point)})" if point else "")
+            for value, up, point in (
+                (common.low, True, common.low_point),
+                (common.high, False, common.high_point),
+            )
         ]
         text = f"all gains by one factor, at every stable point: {ends[0]} to {ends[1]}"
         lines.append(one_line(text))

@@ -46,6 +46,21 @@ def number(value: float | None, digits: int = 4) -> str:
     return f"{rounded:.{digits - 1}e}"
 
 
+def inward(value: float, up: bool) -> str:
+    """Give an end of a range four digits, rounded into the range: ``up`` for its lower end.
+
+    Examples
+    --------
+    >>> inward(1.00789, False), inward(0.05612, True), inward(float("inf"), False)
+    ('1.007', '0.05612', 'inf')
+    """
+    if not math.isfinite(value) or value == 0:
+        return number(value)
+    unit = 10.0 ** (math.floor(math.log10(abs(value))) - 3)
+    steps = math.ceil(value / unit - 1e-9) if up else math.floor(value / unit + 1e-9)
+    return number(steps * unit)
+
+
 def pole(real: float, imag: float) -> str:
     """Write a pole or a conjugate pair.
 

@@ -68,8 +68,9 @@ def test_nothing_is_missed_and_nothing_judged(oscillators):
     record = strict(audit_record(stream_audit(oscillators([0.5]), LOOP, CRITERIA)))
     assert record["worst"] == []
     assert record["requirements"][1]["missed"] == 0
-    assert record["requirements"][1]["worst_point"] is None
-    assert record["requirements"][1]["worst_value"] is None
+    assert record["requirements"][1]["judged"] == 1
+    assert record["requirements"][1]["worst_point"] == "1"
+    assert record["requirements"][1]["worst_value"] == pytest.approx(0.5)
     record = strict(audit_record(stream_audit(oscillators([np.nan]), LOOP, CRITERIA)))
     assert record["max_real"] is None
     assert record["min_damping"] is None
