@@ -42,12 +42,15 @@ def read_bank(path: str | os.PathLike[str]) -> ModelBank:
     except (OSError, ValueError):
         there = False
     if not there:
-        raise BankError("there is no such bank", where=str(path), do="make it with ssaudit ingest")
+        what = "is a folder, not a bank" if path.is_dir() else "there is no such bank"
+        raise BankError(what, where=str(path), do="make it with ssaudit ingest")
     try:
         file = h5py.File(path, "r")
     except OSError as error:
         raise BankError(
-            "is not an HDF5 file, or is cut short", where=str(path), do="ingest the export again"
+            "is not an HDF5 file, or is cut short, and so no bank",
+            where=str(path),
+            do="take the export in with ssaudit ingest",
         ) from error
     try:
         return _read(file, path)

@@ -75,6 +75,10 @@ class PointReport:
         How the loop is closed.
     apart : dict of float
         How far the coordinates are from those asked for, where they were asked for.
+    as_near : int
+        How many points are as near to what was asked for.
+    judged : bool
+        Whether there were requirements to judge by.
     """
 
     point: str
@@ -88,6 +92,8 @@ class PointReport:
     effects: tuple[GainEffect, ...]
     formula: str
     apart: Mapping[str, float]
+    as_near: int = 1
+    judged: bool = True
 
 
 def explain_point(
@@ -130,6 +136,7 @@ def explain_point(
     >>> found.row["verdict"], f"{found.row['min_damping']:.3f}", found.effects[0].signal
     ('ok', '0.200', 'x2')
     """
+    judged = criteria is not None
     criteria = criteria or Criteria()
     loop.check(bank)
     criteria.check(bank)
@@ -158,6 +165,8 @@ def explain_point(
         _effects(loop, section, closed, matrices) if usable and closed.K is not None else (),
         loop.formula,
         {name: at[name] - value for name, value in (near or {}).items()},
+        _as_near(bank, place, near),
+        judged,
     )
 
 
@@ -197,6 +206,12 @@ def find_point(
         return int(found[0])
     if not near:
         raise SsauditError("no point is named", do="give its id, or coordinates near it")
+    # Of equally near points a usable one is wanted first.
+    return int(np.lexsort((bank.points.void != "", _distances(bank, near)))[0])
+
+
+def _distances(bank: ModelBank, near: Mapping[str, float]) -> Floats:
+    """Squared distance of every point from coordinates, as shares of each one's range."""
     distance = np.zeros(len(bank))
     for name, value in near.items():
         if name not in bank.points.coordinates:
@@ -206,9 +221,16 @@ def find_point(
         known = column[np.isfinite(column)]
         spread = np.ptp(known) if len(known) else 0.0
         distance += ((column - value) / (spread or 1.0)) ** 2
-    # Of equally near points a usable one is wanted first.
-    distance = np.where(np.isfinite(distance), distance, np.inf)
-    return int(np.lexsort((bank.points.void != "", distance))[0])
+    return np.where(np.isfinite(distance), distance, np.inf)
+
+
+def _as_near(bank: ModelBank, place: int, near: Mapping[str, float] | None) -> int:
+    """Count the usable points that are as near to some coordinates as one is."""
+    if not near:
+        return 1
+    distance = _distances(bank, near)
+    usable = (bank.points.void == "") | (np.arange(len(bank)) == place)
+    return int(np.count_nonzero((distance <= distance[place] * (1 + 1e-9)) & usable))
 
 
 def _similar(word: str, known: list[str]) -> str:

@@ -37,7 +37,9 @@ def read_toml(path: str | os.PathLike[str], error: type[SsauditError]) -> dict[s
     try:
         text = Path(path).read_text(encoding="utf-8")
     except OSError as problem:
-        raise error(f"cannot be read ({problem.strerror})", where=where) from problem
+        raise error(
+            f"cannot be read ({problem.strerror})", where=where, do="name a TOML file"
+        ) from problem
     except UnicodeDecodeError as problem:
         raise error("is not UTF-8 text", where=where) from problem
     except ValueError as problem:
@@ -95,6 +97,19 @@ def check_keys(
             raise error(f"unknown key {key!r}", where=where, do=nearest(key, valid))
 
 
+# What a missing key should say.
+ADVICE = {
+    "sign": 'say "negative" for u = -K y or "positive" for u = +K y',
+    "gain": "add [gain] with a matrix or a table",
+    "name": "name it",
+    "quantity": "say what is required, such as damping_ratio",
+    "loop": "name a loop file",
+    "criteria": "name a criteria file",
+    "ledger": "name the ledger's folder",
+    "banks": "name a folder for the banks",
+}
+
+
 def take(
     table: Mapping[str, Any],
     key: str,
@@ -134,7 +149,7 @@ def take(
     """
     if key not in table:
         if required:
-            raise error(f"{key} is missing", where=where)
+            raise error(f"{key} is missing", where=where, do=ADVICE.get(key, ""))
         return default
     value = table[key]
     if kind is float:

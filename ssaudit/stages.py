@@ -166,6 +166,23 @@ class Comparison:
     after: LoggedRun
     drift: Drift
 
+    @property
+    def inputs(self) -> dict[str, bool]:
+        """Whether models, loop, criteria, depth and version differ between the runs."""
+        a, b = self.before.about, self.after.about
+        digests = [run.get("digests", {}) for run in (a, b)]
+        differ = {
+            words: digests[0].get(key) != digests[1].get(key)
+            for words, key in (("models", "bank"), ("loop", "loop"), ("criteria", "criteria"))
+        }
+        # The digest of a bank counts its revision; the files that it was made of do not.
+        files = [sorted(s.get("sha256", "") for s in run.get("sources", ())) for run in (a, b)]
+        if all(files):
+            differ["models"] = files[0] != files[1]
+        differ["settings"] = a.get("settings") != b.get("settings")
+        versions = [run.get("versions", {}).get("ssaudit") for run in (a, b)]
+        return {**differ, "version": versions[0] != versions[1]}
+
 
 def compare_runs(
     ledger: Path, before: str, after: str, *, tolerance: float = TOLERANCE

@@ -122,7 +122,7 @@ class TestBank:
         ("how", "message"),
         [
             ("missing", "there is no such bank; make it with ssaudit ingest"),
-            ("a folder", "there is no such bank"),
+            ("a folder", "is a folder, not a bank"),
             ("text", "is not an HDF5 file, or is cut short"),
             ("empty", "is not an HDF5 file, or is cut short"),
             ("npz", "is not an HDF5 file, or is cut short"),
@@ -288,7 +288,7 @@ class TestLoop:
             (re.sub(r",[^,\n]*$", "", TABLE, flags=re.MULTILINE),
              "the gain does not name the state 'rate'"),
             (re.sub(r",[^,\n]*,[^,\n]*$", "", TABLE, flags=re.MULTILINE), "no column K:<input>"),
-            (TABLE.replace(",", ";"), "is not a finite number"),
+            (TABLE.replace(",", ";"), "is separated by semicolons"),
             (b"\xff\xfe\x00", "is not a CSV table"),
             ("a" * 200_000 + "\n1\n", "is not a CSV table"),
         ],

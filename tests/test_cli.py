@@ -222,10 +222,13 @@ class TestWhatIsShown:
                             coordinates={"speed": ([10.0, 11.0, 12.0, 13.0], "m/s")})  # fmt: skip
         text = project.audit(bank).out
         assert re.search(
-            r"\n +1 +of 4 +0\.200 +stability: all poles decay\n +worst at 4; within speed 13 m/s\n", text
+            r"\n +1 +of 4 +0\.200 +stability: all poles decay\n +worst at 4; within speed 13 m/s\n",
+            text,
         )
         assert re.search(
-            r"\n +3 +of 4 +-0\.100 +ride: damping_ratio ≥ 0\.2\n +worst at 4; within speed 11 to 13 m/s\n", text
+            r"\n +3 +of 4 +-0\.100 +ride: damping_ratio ≥ 0\.2\n"
+            r" +worst at 4; within speed 11 to 13 m/s\n",
+            text,
         )
 
     def test_of_many_requirements_those_that_are_missed_most_are_shown(self, project):
@@ -425,7 +428,7 @@ class TestDriftAndTrend:
         text = project.run("drift", project.ledger, "--from", "A", "--to", "B").out
         lines = text.splitlines()
         assert lines[0] == "Drift from revision A to B, points matched by ids"
-        assert lines[1] == "2 worse   1 appeared   1 vanished   1 better   1 same"
+        assert lines[1] == "2 worse   1 appeared   1 vanished   1 better   1 same verdict"
         worse, better = text.index("\nworse (2)"), text.index("\nbetter (1)")
         assert worse < better
         row = next(line for line in text[worse:].splitlines()[2:] if line.startswith("b"))

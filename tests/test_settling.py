@@ -63,7 +63,9 @@ class TestRoundedExports:
 
     def test_the_reason_names_value_spread_and_limit(self):
         found = row(oscillator(0.199), criteria=RIDE, digits=3)
-        assert re.fullmatch(r"ride: damping_ratio 0\.199 ± 0\.00\d\d? against ≥ 0\.2", found["reason"])
+        assert re.fullmatch(
+            r"ride: damping_ratio 0\.199 ± 0\.00\d\d? against ≥ 0\.2", found["reason"]
+        )
         assert found["missed"] == ""
         # Half a unit of the last digit moves it by about that much.
         spread = float(found["reason"].split("± ")[1].split(" ")[0])

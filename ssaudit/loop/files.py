@@ -224,7 +224,9 @@ def _read_csv(path: str | os.PathLike[str]) -> tuple[list[str], list[list[float]
         with open(path, newline="", encoding="utf-8-sig") as file:
             lines = [line for line in csv.reader(file) if any(cell.strip() for cell in line)]
     except OSError as error:
-        raise LoopError(f"cannot be read ({error.strerror})", where=where) from error
+        raise LoopError(
+            f"cannot be read ({error.strerror})", where=where, do="name a CSV file"
+        ) from error
     except (ValueError, csv.Error) as error:
         raise LoopError(f"is not a CSV table ({error})", where=where) from error
     if len(lines) < 2:
@@ -246,6 +248,8 @@ def _as_number(cell: str, number: int, column: str, where: str) -> float:
     except ValueError:
         value = np.nan
     if not np.isfinite(value):
+        if ";" in cell:
+            raise LoopError("is separated by semicolons", where=where, do="separate by commas")
         raise LoopError(
             f"breakpoint {number}, column {column!r}: {cell.strip()!r} is not a finite number",
             where=where,

@@ -31,7 +31,8 @@ def find_misfit(loop: "Loop", section: Section) -> str:
     """
     missing = [name for name in NEEDED[loop.feed] if name not in section.matrices]
     if missing:
-        return f"{missing[0]} is missing, and feed = {loop.feed!r} needs it"
+        zeros = " (export zeros if there is no feedthrough)" if missing[0] == "D" else ""
+        return f"{missing[0]} is missing, and feed = {loop.feed!r} needs it{zeros}"
     signals, extra = loop.signals(section), loop.compensator
     reasons = [misfit_of(statement, section, signals) for statement in loop.uncertain]
     if loop.gain is not None:

@@ -117,7 +117,8 @@ class Loop:
             return "models as exported (closed already)"
         text = f"u = {'-' if self.sign == 'negative' else '+'}K {self.feed}"
         if self.compensator:
-            text += f", compensator of {len(self.compensator)} states"
+            plural = "s" * (len(self.compensator) > 1)
+            text += f", compensator of {len(self.compensator)} state{plural}"
         if self.parts:
             text += f", {len(self.parts)} part{'s' * (len(self.parts) > 1)}"
             text += " (delays as Padé models)" * any(part.delay for part in self.parts)

@@ -74,7 +74,7 @@ def damping_derivatives(poles: Complexes, moves: Complexes, dt: float) -> Floats
     array([[[0.3536]]])
     """
     at: Any = poles[..., np.newaxis, np.newaxis]
-    with np.errstate(invalid="ignore", divide="ignore"):
+    with np.errstate(all="ignore"):
         if dt > 0:
             moves = moves / (at * dt)
             at = np.log(at) / dt

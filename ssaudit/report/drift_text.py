@@ -35,8 +35,10 @@ def drift_text(comparison: Comparison, most: int | None = None) -> RenderableTyp
     matched = f"points matched by {found.matched_by}"
     if found.matched_by == "coordinates":
         matched += f" (within {found.tolerance:g} of their range)"
-    counts = "   ".join(f"{found.changes[name]} {name}" for name in (*CHANGES, "same"))
+    counts = "   ".join(f"{found.changes[name]} {name}" for name in CHANGES)
+    counts += f"   {found.changes['same']} same verdict"
     parts: list[RenderableType] = [one_line(f"{title}, {matched}", "bold"), one_line(counts)]
+    parts.append(one_line(_inputs(comparison)))
     if found.relocated:
         parts.append(one_line(f"{found.relocated} points have the same id, other coordinates"))
     parts += [Text(), *_verdicts(comparison), Text(), *_movement(comparison)]
@@ -53,6 +55,15 @@ def drift_text(comparison: Comparison, most: int | None = None) -> RenderableTyp
         for name, run in (("from", before), ("to", after))
     ]
     return Group(*parts, Text(), *aligned(["", ""], "ll", runs)[1:], Text(), cautions())
+
+
+def _inputs(comparison: Comparison) -> str:
+    """Say what the runs were made of that differs, and what does not."""
+    differ = [name for name, other in comparison.inputs.items() if other]
+    same = [name for name, other in comparison.inputs.items() if not other]
+    if not differ:
+        return "made of the same: nothing differs"
+    return f"other {', '.join(differ)}" + (f"; the same {', '.join(same)}" if same else "")
 
 
 def _verdicts(comparison: Comparison) -> list[Text]:

@@ -9,6 +9,7 @@ from ssaudit.point import CHANGE, PointReport
 from ssaudit.report.words import (
     aligned,
     cautions,
+    inward,
     number,
     one_line,
     place,
@@ -39,11 +40,15 @@ def point_text(report: PointReport) -> RenderableType:
     name = f"Point {report.point} of revision {row['revision']}"
     title = one_line(": ".join([name, ", ".join(where)] if where else [name]), "bold")
     judged = Text.assemble(verdict(row["verdict"]), printable(f"  {row['reason']}".rstrip()))
+    if row["verdict"] == "ok" and not report.judged:
+        judged = Text("stable, and judged by no requirement: --criteria")
     judged.no_wrap, judged.overflow = True, "ellipsis"
     parts: list[RenderableType] = [title, judged]
     if any(report.apart.values()):
         apart = ", ".join(f"{name} {gap:+g}" for name, gap in report.apart.items())
         parts.append(one_line(f"nearest point there is; away from what was asked: {apart}"))
+    if report.as_near > 1:
+        parts.append(one_line(f"the first of {report.as_near} points that are as near"))
     parts += [*_first(report), Text(), *_modes(report)]
     if report.loops:
         parts += [Text(), *_loops(report), *_whole(report)]
@@ -61,9 +66,9 @@ def _first(report: PointReport) -> list[Text]:
         text = f"first lost by gain: {number(gain, 3)} dB at {row['gain_margin_db_loop']}"
         lines.append(one_line(f"{text}, {number(row['gain_margin_db_frequency'], 3)} rad/s"))
     if not math.isnan(phase) and math.isfinite(phase):
-        text = f"first lost by phase: {number(phase, 3)} deg at {row['phase_margin_deg_loop']}"
-        text += f", {number(row['phase_margin_deg_frequency'], 3)} rad/s"
-        lines.append(one_line(f"{text}; by delay: {number(row['delay_margin_s'], 3)} s"))
+        margins = f"{number(phase, 3)} deg or {number(row['delay_margin_s'], 3)} s of delay"
+        text = f"first lost by phase: {margins} at {row['phase_margin_deg_loop']}"
+        lines.append(one_line(f"{text}, {number(row['phase_margin_deg_frequency'], 3)} rad/s"))
     return lines
 
 
@@ -72,20 +77,22 @@ def _modes(report: PointReport) -> list[Text]:
         [
             pole(mode["real"], mode["imag"]),
             number(mode["radius"], 2),
-            number(mode["damping_ratio"], 3),
-            number(mode["natural_frequency"], 3),
             number(mode["time_constant"], 3),
+            number(mode["natural_frequency"], 3),
+            number(mode["damping_ratio"], 3),
             str(mode["top_states"]),
         ]
         for mode in report.modes[:MOST_MODES]
     ]
-    headings = ["modes, least damped first 1/s", "off by", "ζ", "ω rad/s", "τ s", "mostly in"]
+    headings = ["modes 1/s", "off by", "τ s", "ω rad/s", "ζ", "mostly in"]
     rest = len(report.modes) - MOST_MODES
     lines = aligned(headings, "rrrrrl", rows)
     return [*lines, one_line(f"and {rest} more: --json", "dim")] if rest > 0 else lines
 
 
 def _loops(report: PointReport) -> list[Text]:
+    if not any(bool(loop.margins.stable[0]) for loop in report.loops):
+        return [one_line("not stable: single loops have no margins here")]
     rows = []
     for loop in report.loops:
         margins = loop.margins
@@ -95,13 +102,14 @@ def _loops(report: PointReport) -> list[Text]:
                 number(float(margins.gain_low_db[0]), 3),
                 number(float(margins.gain_high_db[0]), 3),
                 number(float(margins.phase_deg[0]), 3),
+                number(float(margins.phase_frequency[0]), 3),
                 number(float(margins.delay_s[0]), 3),
                 number(float(loop.peaks.sensitivity[0]), 3),
-                number(float(margins.phase_frequency[0]), 3),
+                number(float(loop.peaks.sensitivity_frequency[0]), 3),
             ]
         )
-    headings = ["loops", "gain down dB", "up dB", "phase deg", "delay s", "peak S", "at rad/s"]
-    return aligned(headings, "lrrrrrr", rows)
+    headings = ["loops", "down dB", "up dB", "phase deg", "rad/s", "delay s", "peak S", "rad/s"]
+    return aligned(headings, "lrrrrrrr", rows)
 
 
 def _whole(report: PointReport) -> list[Text]:
@@ -110,24 +118,20 @@ def _whole(report: PointReport) -> list[Text]:
     lines = []
     if gains is not None:
         spans = [
-            f"{number(float(low), 3)} to {number(float(high), 3)}"
+            f"{inward(float(low), True)} to {inward(float(high), False)}"
             for low, high in zip(gains.low[0], gains.high[0], strict=True)
             if not math.isnan(low)
         ]
         text = " and ".join(spans) or "no factor"
         lines.append(one_line(f"all gains by one factor: stable for {text}"))
+    if row["verdict"] == "lost":
+        return lines
     disks = [f"{end} {number(row[f'disk_margin_{end}'], 3)}" for end in ("input", "output", "both")]
     lines.append(one_line(f"disk margins: {', '.join(disks)}"))
-    radii = [
-        f"{words} {number(row[name], 3)}"
-        for words, name in (
-            ("as scaled", "stability_radius_scaled"),
-            ("real as scaled", "real_stability_radius_scaled"),
-            ("in the states' units", "stability_radius"),
-            ("real", "real_stability_radius"),
-        )
-    ]
-    lines.append(one_line(f"stability radii 1/s: {', '.join(radii)}"))
+    for kind, words in (("_scaled", "states scaled"), ("", "states as exported")):
+        radii = [number(row[f"{real}stability_radius{kind}"], 3) for real in ("", "real_")]
+        text = f"stability radius 1/s, {words}: {radii[0]}, for real changes {radii[1]}"
+        lines.append(one_line(text))
     return lines
 
 

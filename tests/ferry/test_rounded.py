@@ -1,11 +1,13 @@
 """The rounded export: regenerated, in the default layout, and rounded as it says."""
 
+import re
 from pathlib import Path
 
 import numpy as np
 import pytest
 from ferry_reckoning import DATA
 
+import ssaudit
 from ssaudit.ferry.models import INPUTS, OUTPUTS, STATES, build_models
 from ssaudit.ferry.rounded import DIGITS, build_rounded, round_to_digits, write_rounded
 from ssaudit.ferry.vessel import STERN_TANK, Ferry
@@ -70,3 +72,24 @@ def test_rounding_is_that_of_decimals() -> None:
     ids, models = build_rounded()
     assert ids[-1] == "v24.0-m125-h1.4"
     np.testing.assert_array_equal(models.A, round_to_digits(models.A, DIGITS))
+
+
+def test_the_documents_state_the_radii_that_are_found(tmp_path):
+    """The table of doubts in data/README.md, and the verdict table of README.md."""
+    root = Path(__file__).parents[2]
+    ssaudit.ingest([root / "data/ferry-b-rounded.npz"], revision="B", bank=tmp_path / "b.h5")
+    loop = ssaudit.read_loop(root / "configs/loops/ferry-a-undelayed.toml")
+    criteria = ssaudit.read_criteria(root / "configs/criteria/ferry.toml")
+    with ssaudit.read_bank(tmp_path / "b.h5") as bank:
+        points = ssaudit.audit(bank, loop, criteria).points.set_index("point")
+    told = (root / "data/README.md").read_text(encoding="utf-8")
+    rows = re.findall(r"\| `(v[\w.-]+)` \| (-?[\d.]+) ± ([\d.]+) \|", told)
+    assert len(rows) == (points["doubt"] == "stability").sum() == 4
+    for name, real, radius in rows:
+        assert float(real) == pytest.approx(points.loc[name, "real"], abs=6e-5)
+        # Rounded up, as the reasons are.
+        found = points.loc[name, "radius"]
+        assert found <= float(radius) <= 1.1 * found
+    name, real, radius = rows[0]
+    readme = (root / "README.md").read_text(encoding="utf-8")
+    assert f"`{name}`: real part {real} ± {radius} 1/s" in readme

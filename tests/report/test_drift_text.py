@@ -47,7 +47,7 @@ def section(shown, title):
 
 def test_nothing_changed(compared):
     shown = lines(drift_text(compared([0.5, 0.1], [0.5, 0.1])))
-    assert shown[1] == "0 worse   0 appeared   0 vanished   0 better   2 same"
+    assert shown[1] == "0 worse   0 appeared   0 vanished   0 better   2 same verdict"
     assert not [line for line in shown if line.startswith(("worse", "largest movers"))]
     assert " ".join(shown).split()[-len(CAUTION_WORDS) :] == CAUTION_WORDS
 
