@@ -425,7 +425,7 @@ def _show(renderable: "RenderableType") -> None:
         markup=False,
         emoji=False,
     )
-    console.print(renderable)
+    console.print(renderable, crop=False)
     console.print()
     _print(screen.getvalue())
 

@@ -13,8 +13,11 @@ from ssaudit.intake.orientation import TRANSPOSED
 from ssaudit.intake.report import IntakeReport, SectionFound
 from ssaudit.intake.survey import Survey, dead_signals
 from ssaudit.intake.suspects import find_suspects
+from ssaudit.intake.unused import listed
 
 MOST_REASONS = 100
+# Unused arrays and attributes that are named.
+MOST_UNUSED = 20
 
 
 def compose(
@@ -24,6 +27,7 @@ def compose(
     size: int,
     layout: Layout | None,
     reordered: int,
+    unused: Sequence[str] = (),
 ) -> IntakeReport:
     """Write the intake report of a finished bank.
 
@@ -41,6 +45,8 @@ def compose(
         None for the default layout.
     reordered : int
         Points whose signals were put in another order.
+    unused : sequence of str
+        What the files hold and was not read.
 
     Returns
     -------
@@ -60,7 +66,10 @@ def compose(
         grid=find_grid(points),
         sections=sections,
         suspects=find_suspects(settled, survey),
-        notes=tuple(_notes(settled, sections, survey, layout, reordered)),
+        notes=(
+            *_unused(unused),
+            *_notes(settled, sections, survey, layout, reordered),
+        ),
     )
 
 
@@ -103,11 +112,11 @@ def _notes(
         )
     if turned:
         notes.append(
-            f"A of {sum(turned.values())} points looks transposed against the others, "
+            f"A of {_points(sum(turned.values()))} looks transposed against the others, "
             f"first in {next(iter(turned))}"
         )
     if reordered:
-        notes.append(f"signals of {reordered} points were put in the order of the first file")
+        notes.append(f"signals of {_points(reordered)} were put in the order of the first file")
     for number, section in zip(settled.numbers, settled.sections, strict=True):
         if section.states:
             notes += dead_signals(section, survey.sections[number])
@@ -118,6 +127,15 @@ def _notes(
     return list(dict.fromkeys(notes))
 
 
+def _points(count: int) -> str:
+    return f"{count} point{'' if count == 1 else 's'}"
+
+
+def _unused(names: Sequence[str]) -> list[str]:
+    """Say what was not read: it may be what somebody took for a part of the export."""
+    return [f"not used: {listed(names, MOST_UNUSED)}"] if names else []
+
+
 def _left_out(layout: Layout) -> list[str]:
     """Say what it means that a layout takes some of the states alone."""
     if "states" not in layout.take:
@@ -125,7 +143,8 @@ def _left_out(layout: Layout) -> list[str]:
     named = layout.names.get("states")
     if isinstance(named, tuple) and set(named) == set(layout.take["states"]):
         return []
+    taken = len(layout.take["states"])
     return [
-        f"{len(layout.take['states'])} states are taken; what others do to these is left out of "
-        "the models"
+        f"{taken} state{' is' if taken == 1 else 's are'} taken; what others do to "
+        f"{'it' if taken == 1 else 'these'} is left out of the models"
     ]

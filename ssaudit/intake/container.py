@@ -1,6 +1,6 @@
 """What HDF5 and NPZ files have in common: named arrays, read in slices."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import Any, Protocol
 
 import numpy as np
@@ -10,6 +10,12 @@ from ssaudit.errors import SourceError
 from ssaudit.intake.guard import as_digits, as_number, split_names
 from ssaudit.intake.layout import KINDS, Column, Layout, Place
 from ssaudit.settings import nearest
+
+# Significant digits of float types narrower than 64 bits, by their bytes: 24 and 11 binary digits
+# (IEEE 754-2019, table 3.5) are 7.2 and 3.3 decimal ones.
+NARROW_DIGITS = {4: 7, 2: 3}
+# What arrays hold that hold no real numbers, by kind of type.
+_HELD = {"S": "text", "U": "text", "O": "text", "c": "complex numbers", "b": "truth values"}
 
 
 class Stored(Protocol):
@@ -62,6 +68,10 @@ class Container(Protocol):
 
     def attribute(self, path: str, name: str) -> Any:
         """Value of an attribute, or None."""
+        ...
+
+    def attributes(self, path: str) -> list[str]:
+        """Names of the attributes of a group or array; "" is for the top."""
         ...
 
     def unit(self, name: str) -> str:
@@ -173,6 +183,35 @@ def _value(container: Container, place: Place, layout: Layout, what: str, group:
     return value
 
 
+def digits_of(types: Iterable[np.dtype[Any]]) -> tuple[int | None, str]:
+    """Significant digits that matrices can have been written with, by their types.
+
+    Parameters
+    ----------
+    types : iterable of dtype
+        Types of the arrays.
+
+    Returns
+    -------
+    digits : int or None
+        Of the narrowest float type; None for whole numbers and 64-bit numbers.
+    name : str
+        Name of that type, or "".
+
+    Examples
+    --------
+    >>> digits_of([np.dtype("f8"), np.dtype(">f4"), np.dtype("i2")])
+    (7, 'float32')
+    >>> digits_of([np.dtype("f8"), np.dtype("i4")])
+    (None, '')
+    """
+    narrow = [t for t in types if t.kind == "f" and t.itemsize in NARROW_DIGITS]
+    if not narrow:
+        return None, ""
+    narrowest = min(narrow, key=lambda t: t.itemsize)
+    return NARROW_DIGITS[narrowest.itemsize], f"float{8 * narrowest.itemsize}"
+
+
 def as_real(values: Any, name: str, where: str) -> NDArray[np.float64]:
     """Values of a matrix as 64-bit numbers.
 
@@ -183,8 +222,9 @@ def as_real(values: Any, name: str, where: str) -> NDArray[np.float64]:
     """
     array = np.asarray(values)
     if array.dtype.kind not in "fiu":
+        holds = _HELD.get(array.dtype.kind, str(array.dtype))
         raise SourceError(
-            f"{name} holds {array.dtype}, not real numbers", where=where, do="export real matrices"
+            f"{name} holds {holds}, not real numbers", where=where, do="export real matrices"
         )
     return array.astype(np.float64, copy=False)
 

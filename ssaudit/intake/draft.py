@@ -2,17 +2,25 @@
 
 import json
 import re
+import textwrap
 from collections.abc import Mapping
 from typing import Any
 
 from ssaudit.intake.layout import KEYS
 
 _BARE = re.compile(r"[A-Za-z0-9_-]+")
-HEAD = "# Draft layout. Read it against the export; configs/layouts/README.md explains the keys."
+HEAD = (
+    "# Draft layout. Read it against the export.",
+    "# configs/layouts/README.md explains the keys.",
+)
+# Characters of a line, so that no screen breaks it.
+WIDTH = 79
 
 
 def write_draft(content: Mapping[str, Any], remarks: Mapping[str, str]) -> str:
-    """Write the content of a layout as TOML.
+    """Write the content of a layout as TOML, in lines that fit a narrow screen.
+
+    Comments stand above what they are about where they would make its line too long.
 
     Parameters
     ----------
@@ -28,14 +36,17 @@ def write_draft(content: Mapping[str, Any], remarks: Mapping[str, str]) -> str:
     Examples
     --------
     >>> print(write_draft({"format": "npz", "matrices": {"A": "lin/A"}}, {"format": "sure"}))
-    # Draft layout. Read it against the export; configs/layouts/README.md explains the keys.
+    # Draft layout. Read it against the export.
+    # configs/layouts/README.md explains the keys.
     format = "npz"  # sure
     <BLANKLINE>
     [matrices]
     A = "lin/A"
     <BLANKLINE>
     """
-    lines = [HEAD, *(f"# {_plain(line)}" for line in remarks.get("", "").splitlines())]
+    lines = [*HEAD]
+    for line in remarks.get("", "").splitlines():
+        lines += _comment(line)
     tables = []
     for key in KEYS:
         if key not in content:
@@ -44,26 +55,43 @@ def write_draft(content: Mapping[str, Any], remarks: Mapping[str, str]) -> str:
         if isinstance(value, Mapping):
             tables += _tables(key, value, remarks)
         else:
-            lines.append(f"{key} = {_value(value)}{_remark(remarks, key)}")
+            lines += _entry(key, value, remarks.get(key, ""))
     return "\n".join([*lines, *tables]) + "\n"
 
 
 def _tables(name: str, table: Mapping[str, Any], remarks: Mapping[str, str]) -> list[str]:
     plain = {key: value for key, value in table.items() if not isinstance(value, Mapping)}
-    lines = ["", f"[{name}]{_remark(remarks, name)}"] if plain else []
-    lines += [
-        f"{_key(key)} = {_value(value)}{_remark(remarks, f'{name}.{key}')}"
-        for key, value in plain.items()
-    ]
+    lines = ["", *_remarked(f"[{name}]", remarks.get(name, ""))] if plain else []
+    for key, value in plain.items():
+        lines += _entry(key, value, remarks.get(f"{name}.{key}", ""))
     for key, inner in table.items():
         if isinstance(inner, Mapping):
-            lines += ["", f"[{name}.{_key(key)}]{_remark(remarks, f'{name}.{key}')}"]
-            lines += [f"{_key(k)} = {_value(v)}" for k, v in inner.items()]
+            head = f"[{name}.{_key(key)}]"
+            lines += ["", *_remarked(head, remarks.get(f"{name}.{key}", ""))]
+            for inner_key, value in inner.items():
+                lines += _entry(inner_key, value, "")
     return lines
 
 
-def _remark(remarks: Mapping[str, str], key: str) -> str:
-    return f"  # {_plain(remarks[key])}" if key in remarks else ""
+def _entry(key: str, value: Any, remark: str) -> list[str]:
+    """Lines of one key; a list that is too long for one has an item a line."""
+    line = f"{_key(key)} = {_value(value)}"
+    if len(line) > WIDTH and isinstance(value, list | tuple):
+        items = [f"    {_value(item)}," for item in value]
+        return [*_comment(remark), f"{_key(key)} = [", *items, "]"]
+    return _remarked(line, remark)
+
+
+def _remarked(line: str, remark: str) -> list[str]:
+    """Put a comment behind a line, or above it where there is no room."""
+    if not remark:
+        return [line]
+    behind = f"{line}  # {_plain(remark)}"
+    return [behind] if len(behind) <= WIDTH else [*_comment(remark), line]
+
+
+def _comment(text: str) -> list[str]:
+    return [f"# {line}" for line in textwrap.wrap(_plain(text), WIDTH - 2)]
 
 
 def _plain(text: str) -> str:

@@ -12,6 +12,7 @@ from ssaudit.intake.container import (
     Container,
     as_real,
     describe,
+    digits_of,
     find,
     find_column,
     unflatten,
@@ -69,7 +70,10 @@ def _one(container: Container, layout: Layout, group: str, fields: Mapping[str, 
             columns[column.name] = "" if column.is_tag else np.nan
             missing = missing or f"{column.name} is missing"
         units[column.name] = unit_of(container, column, group)
-    matrices, problem = _matrices(container, layout, group)
+    matrices, problem, types = _matrices(container, layout, group)
+    digits_by = ""
+    if digits is None:
+        digits, digits_by = digits_of(types)
     return OnePoint(
         _id(container, layout, group, fields),
         matrices,
@@ -80,29 +84,33 @@ def _one(container: Container, layout: Layout, group: str, fields: Mapping[str, 
         dt,
         digits,
         basis=BY_SHAPES,
+        digits_by=digits_by,
     )
 
 
 def _matrices(
     container: Container, layout: Layout, group: str
-) -> tuple[dict[str, NDArray[np.float64]], str]:
-    """Matrices of a group, and what is wrong with them, or ""."""
+) -> tuple[dict[str, NDArray[np.float64]], str, list[np.dtype[Any]]]:
+    """Matrices of a group, what is wrong with them, or "", and the types they are stored in."""
     found = {}
+    types = []
     for name in MATRIX_NAMES:
         path = f"{group}/{layout.matrices.get(name, '')}"
         if name not in layout.matrices or path not in container:
             continue
         try:
-            found[name] = as_real(container.array(path).whole(), name, container.where)[np.newaxis]
+            stored = container.array(path)
+            found[name] = as_real(stored.whole(), name, container.where)[np.newaxis]
+            types.append(stored.dtype)
         except SourceError as error:
             # One bad model never stops an intake: the group is a void point.
-            return {}, f"{name}: {error.what}"
+            return {}, f"{name}: {error.what}", []
     if "A" not in found:
-        return {}, "A is missing"
+        return {}, "A is missing", []
     if any(stack.ndim > 3 for stack in found.values()):
-        return {}, "its matrices have more than two dimensions"
+        return {}, "its matrices have more than two dimensions", []
     shaped = unflatten(found, layout.order == COLUMN_MAJOR)
-    return {name: stack[0] for name, stack in shaped.items()}, ""
+    return {name: stack[0] for name, stack in shaped.items()}, "", types
 
 
 def _single(value: Any) -> Any:

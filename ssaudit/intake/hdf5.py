@@ -130,6 +130,12 @@ class Hdf5Container:
             owner = self._open(path) if path else self.file
             return None if owner is None else owner.attrs.get(name)
 
+    def attributes(self, path: str) -> list[str]:
+        """Names of the attributes of a group or dataset; "" is for the top."""
+        with damage_reported(f"{self.where}, {path}" if path else self.where):
+            owner = self._open(path) if path else self.file
+            return [] if owner is None else [str(name) for name in owner.attrs]
+
     def unit(self, name: str) -> str:
         """Text of the attribute ``units`` (or ``unit``) of a dataset."""
         for key in ("units", "unit"):

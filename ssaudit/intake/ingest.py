@@ -37,6 +37,7 @@ from ssaudit.intake.sources import (
 from ssaudit.intake.stacked import stacked_pieces
 from ssaudit.intake.survey import Survey
 from ssaudit.intake.table import Table
+from ssaudit.intake.unused import listed
 
 Progress = Callable[[str, int, int], None]
 
@@ -126,16 +127,19 @@ def ingest(
     survey, aligner, taken = Survey(), Aligner(), _Taken()
     with Background() as background, BankWriter(target, revision, background.run) as writer:
         for parcel in parcels_of(files, described):
-            for batch in _batches_told(parcel, described, taken, total, progress):
+            name = parcel[0].name
+            for batch, digits_by in _batches_told(parcel, described, taken, total, progress):
                 batch = aligner.align(batch, str(parcel[0].path))
                 number = writer.append(batch)
-                background.run_sized(batch.size, survey.add, number, batch, parcel[0].name)
+                background.run_sized(batch.size, survey.add, number, batch, name, digits_by)
             taken.add_sources(parcel, background)
             progress("ingest", taken.bytes, total)
         settled = _settle(writer, files, taken)
         background.wait()
         read = taken.sources
-        report = compose(settled, survey, read, total, described, aligner.reordered)
+        report = compose(
+            settled, survey, read, total, described, aligner.reordered, tuple(taken.unused)
+        )
         void = count_reasons(settled.points)
         digest = writer.finish(read, ids_given=False not in taken.named, intake=report.to_json())
     return Intake(target, revision, digest, len(settled.points), void, read, report)
@@ -153,12 +157,15 @@ class _Taken:
         Size of the files that are done.
     named : set of bool
         Whether files named their points.
+    unused : dict
+        Names of what the files hold and is not read, in order.
     """
 
     points: int = 0
     held: int = 0
     bytes: int = 0
     named: set[bool] = field(default_factory=set)
+    unused: dict[str, None] = field(default_factory=dict)
     _sources: list[tuple[str, Callable[[], str], int]] = field(default_factory=list)
 
     def add_sources(self, parcel: Sequence[SourceFile], background: Background) -> None:
@@ -186,14 +193,15 @@ def _batches_told(
     taken: _Taken,
     total: int,
     progress: Progress,
-) -> Iterator[Batch]:
-    """Read a parcel of files, and tell how far it has come."""
+) -> Iterator[tuple[Batch, str]]:
+    """Read a parcel of files, and tell how far it has come; yield what digits go by as well."""
     size, read = sum(file.path.stat().st_size for file in parcel), 0
     with closing(batches_of(parcel, layout, taken.points + 1)) as batches:
-        for batch, has_ids in batches:
+        for batch, facts in batches:
             taken.held += len(batch.points)
-            taken.named.add(has_ids)
-            yield batch
+            taken.named.add(facts.has_ids)
+            taken.unused.update(dict.fromkeys(facts.unused))
+            yield batch, facts.digits_by
             # How far text has been read is not known; its models are at most as large.
             read = min(read + batch.size, size)
             progress("ingest", taken.bytes + read, total)
@@ -204,7 +212,13 @@ def _settle(writer: BankWriter, files: Sequence[SourceFile], taken: _Taken) -> S
         return writer.settle(ids_given=True in taken.named)
     except BankError as error:
         more = f" and {len(files) - 1} more files" if len(files) > 1 else ""
-        raise BankError(error.what, where=f"{files[0].path}{more}", do=error.do) from error
+        do = error.do
+        if "A is missing" in error.what and taken.unused:
+            do = (
+                f"held and not used: {listed(list(taken.unused))}; say which is A in a layout; "
+                f"ssaudit look {files[0].path} drafts one"
+            )
+        raise BankError(error.what, where=f"{files[0].path}{more}", do=do) from error
 
 
 def _digest(path: Path, size: int, background: Background) -> Callable[[], str]:
@@ -222,9 +236,28 @@ def parcels_of(files: Sequence[SourceFile], layout: Layout | None) -> list[list[
     return [[file] for file in files]
 
 
+@dataclass(frozen=True)
+class Facts:
+    """What a file says that the bank does not keep.
+
+    Attributes
+    ----------
+    has_ids : bool
+        Whether it names its points.
+    digits_by : str
+        Type that the digits are those of, "" where they were stated.
+    unused : tuple of str
+        What it holds and is not read.
+    """
+
+    has_ids: bool
+    digits_by: str
+    unused: tuple[str, ...]
+
+
 def batches_of(
     files: Sequence[SourceFile], layout: Layout | None, first: int
-) -> Generator[tuple[Batch, bool], None, None]:
+) -> Generator[tuple[Batch, Facts], None, None]:
     """Read a parcel of files.
 
     Parameters
@@ -240,15 +273,17 @@ def batches_of(
     ------
     batch : Batch
         Checked points.
-    has_ids : bool
-        Whether the file names them.
+    facts : Facts
+        What else the file says of them.
     """
     where = str(files[0].path)
     layout = layout_for(files[0].path) if layout is None else layout
     for piece in pieces_of(files, layout):
         ids = _ids(piece, first)
         first += len(piece)
-        yield complete(piece, layout, where, ids), piece.ids is not None
+        by = "" if isinstance(layout.digits, int) else piece.digits_by
+        facts = Facts(piece.ids is not None, by, piece.unused)
+        yield complete(piece, layout, where, ids), facts
 
 
 def pieces_of(files: Sequence[SourceFile], layout: Layout) -> Iterator[Piece]:

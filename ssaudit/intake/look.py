@@ -131,7 +131,7 @@ def look(path: str | os.PathLike[str]) -> Look:
         raise SourceError(
             f"holds no file of a known format ({', '.join(kinds)})",
             where=str(path),
-            do=f"known are {', '.join(SUFFIXES)}",
+            do=f"known are {', '.join(SUFFIXES)}: export one of these",
         )
     names = _names(path, files)
     pattern = find_pattern(names) if len(names) > 1 else None
@@ -188,6 +188,9 @@ def _format(path: Path) -> str:
         found = None
     if found is None and path.suffix.lower() == ".json":
         return "json-lines"
+    if found is None and path.suffix.lower() == ".mat":
+        # The suffix stands for formats of which HDF5 is one.
+        by_suffix = ""
     return found or by_suffix or path.suffix.lower() or "no suffix"
 
 

@@ -91,6 +91,10 @@ class NpzContainer:
         """Return None: the format has no attributes."""
         return None
 
+    def attributes(self, path: str) -> list[str]:
+        """Return nothing: the format has no attributes."""
+        return []
+
     def unit(self, name: str) -> str:
         """Text of the array ``units_<coordinate>``."""
         member = UNITS + name.removeprefix(COORDINATE)

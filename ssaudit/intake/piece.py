@@ -54,6 +54,10 @@ class Piece:
     basis : str
         How rows are told from columns: "labels" where the file says row and column of every
         entry, "shapes" where it holds matrices of stated shape, "" where it holds rows of entries.
+    digits_by : str
+        Type that ``digits`` are those of, such as "float32"; "" where the file states them.
+    unused : tuple of str
+        What else the file holds, and is not read.
     """
 
     ids: Strings | None
@@ -66,6 +70,8 @@ class Piece:
     digits: int | None = None
     digits_seen: int | None = None
     basis: str = ""
+    digits_by: str = ""
+    unused: tuple[str, ...] = ()
 
     def __len__(self) -> int:
         return len(self.void)
@@ -85,6 +91,7 @@ class OnePoint:
     digits: int | None = None
     digits_seen: int | None = None
     basis: str = ""
+    digits_by: str = ""
 
     @property
     def signature(self) -> tuple[Any, ...]:
@@ -93,7 +100,7 @@ class OnePoint:
         columns = tuple((name, isinstance(value, str)) for name, value in self.columns.items())
         return (
             shapes, columns, tuple(self.names.items()), tuple(self.units.items()),
-            self.dt, self.digits, self.basis,
+            self.dt, self.digits, self.digits_by, self.basis,
         )  # fmt: skip
 
 
@@ -140,6 +147,7 @@ def _joined(points: list[OnePoint]) -> Piece:
         digits=first.digits,
         digits_seen=max(seen) if seen else None,
         basis=first.basis,
+        digits_by=first.digits_by,
     )
 
 

@@ -110,7 +110,7 @@ class SectionFound:
     digits : int or None
         Significant digits; None for full precision.
     digits_by : str
-        "stated" or "inspection"; "" for full precision.
+        "stated", "inspection", or the type of the arrays ("float32"); "" for full precision.
     entries : tuple of Entries
         One a matrix.
     orientation : Orientation

@@ -164,7 +164,9 @@ def _sketch_groups(format_: str, survey: _Survey, parent: str, sketch: Sketch) -
     models = [group for group in groups if _holds_model(group, survey)]
     first = models[0]
     count = max(survey.groups.get(parent, 0), len(groups))
-    sketch.findings.append(f"{count} groups below {parent or 'the top'!r}: a point a group")
+    groups_found = f"{count} group{'' if count == 1 else 's'}"
+    below = f"below {parent!r}" if parent else "at the top"
+    sketch.findings.append(f"{groups_found} {below}: a point a group")
     content: dict[str, Any] = {"format": format_, "points": GROUP}
     names = [group.removeprefix(prefix) for group in models]
     pattern = find_pattern(names)

@@ -24,6 +24,8 @@ USER_BLOCKS = (0, 512, 1024, 2048)
 MOST_FILES = 1_000_000
 # Files of a folder that are taken without a layout.
 DEFAULT_SUFFIXES = (*SUFFIXES["hdf5"][:3], *SUFFIXES["npz"])
+# Text that does not say by its beginning what it is.
+TEXT_SUFFIXES = (*SUFFIXES["csv"], *SUFFIXES["json-lines"], ".json")
 OPENERS: dict[str, Callable[[Path], AbstractContextManager[Container]]] = {
     "hdf5": open_hdf5,
     "npz": open_npz,
@@ -69,19 +71,34 @@ def find_files(
     Raises
     ------
     SourceError
-        When a source names no file, a file does not fit the layout's pattern, or is no regular
-        file.
+        When a source names no file, two name the same one, a file does not fit the layout's
+        pattern, or is no regular file.
     """
     found: dict[Path, SourceFile] = {}
+    named: dict[Path, Path] = {}
     for source in map(Path, sources):
         files = list(_files_of(source, layout))
         if not files:
             raise _no_files(source, layout)
+        if len(sources) > 1:
+            _refuse_twice(source, files, named)
         for file in files:
-            found.setdefault(file.path, file)
+            found[file.path] = file
     if not found:
         raise SourceError("no source is named", do="name files or a folder")
     return list(found.values())
+
+
+def _refuse_twice(source: Path, files: Sequence[SourceFile], named: dict[Path, Path]) -> None:
+    """Refuse a file that another source named, in whatever spelling; note those of this one."""
+    new = {}
+    for file in files:
+        real = file.path.resolve()
+        if real in named:
+            other = "" if named[real] == source else f", by {named[real]} and by {source}"
+            raise SourceError(f"is named twice{other}", where=str(file.path), do="name it once")
+        new[real] = source
+    named |= new
 
 
 def _files_of(source: Path, layout: Layout | None) -> Iterator[SourceFile]:
@@ -214,8 +231,16 @@ def layout_for(path: Path) -> Layout:
     found = format_of(path)
     if found in OPENERS:
         return default_layout(found)
-    what = "is neither HDF5 nor NPZ" if found is None else f"is {found}, which needs a layout"
-    raise SourceError(what, where=str(path), do=f"ssaudit look {path} drafts a layout")
+    do = f"ssaudit look {path} drafts a layout"
+    if found is not None:
+        raise SourceError(f"is {found}, which needs a layout", where=str(path), do=do)
+    if path.suffix.lower() in TEXT_SUFFIXES:
+        raise SourceError("is neither HDF5 nor NPZ and needs a layout", where=str(path), do=do)
+    raise SourceError(
+        "is neither HDF5 nor NPZ",
+        where=str(path),
+        do=f"export one of the known formats: {', '.join(SUFFIXES)}",
+    )
 
 
 def check_format(path: Path, layout: Layout) -> None:

@@ -15,15 +15,17 @@ from ssaudit.intake.container import (
     Stored,
     as_real,
     describe,
+    digits_of,
     find,
     find_column,
     unflatten,
     unit_of,
 )
 from ssaudit.intake.guard import BATCH_BYTES, MOST_POINTS, WHOLE_BYTES, as_words
-from ssaudit.intake.layout import COLUMN_MAJOR, FILE, LAST_AXIS, Layout
+from ssaudit.intake.layout import COLUMN_MAJOR, FILE, FIRST_AXIS, LAST_AXIS, Layout
 from ssaudit.intake.orientation import BY_SHAPES
 from ssaudit.intake.piece import Piece
+from ssaudit.intake.unused import listed, unused_keys
 from ssaudit.settings import nearest
 
 
@@ -39,6 +41,8 @@ class _Export:
     names: Mapping[str, tuple[str, ...]]
     dt: float
     digits: int | None
+    digits_by: str
+    unused: tuple[str, ...]
     basis: str
     step: int
     read: Callable[[int, int], dict[str, NDArray[np.float64]]]
@@ -82,10 +86,13 @@ def stacked_pieces(
             export.dt,
             export.digits,
             basis=export.basis,
+            digits_by=export.digits_by,
+            unused=export.unused,
         )
 
 
 def _open(container: Container, layout: Layout, fields: Mapping[str, str], stem: str) -> _Export:
+    unused = unused_keys(container, layout) if layout.lenient else ()
     arrays = _arrays(container, layout)
     single = layout.points == FILE or (layout.lenient and _is_single(arrays))
     columns, units = _columns(container, layout, fields)
@@ -98,6 +105,9 @@ def _open(container: Container, layout: Layout, fields: Mapping[str, str], stem:
     }
     count = _count(container, arrays, axes, layout, single, {**columns, **_present("ids", ids)})
     names, dt, digits = describe(container, layout)
+    digits_by = ""
+    if digits is None:
+        digits, digits_by = digits_of(stored.dtype for stored in arrays.values())
     return _Export(
         container.where,
         count,
@@ -107,6 +117,8 @@ def _open(container: Container, layout: Layout, fields: Mapping[str, str], stem:
         names,
         dt,
         digits,
+        digits_by,
+        unused,
         _basis(arrays, axes),
         _step(arrays, axes, count),
         _reader(container, arrays, axes, layout, single),
@@ -191,9 +203,10 @@ def _count(
     strict = layout.lenient or not lengths
     lengths |= {n: c.size for n, c in columns.items() if strict or n == "ids" or c.size != 1}
     if not lengths or not arrays:
-        expected = "datasets A, B, C, D with the point axis first"
+        expected = "arrays A, B, C, D with the point axis first"
+        held = listed(container.under("")) or "nothing"
         raise SourceError(
-            f"holds no models: expected {expected}",
+            f"holds no models: it holds {held} where {expected} are expected",
             where=container.where,
             do=f"describe it in a layout; ssaudit look {container.where} drafts one",
         )
@@ -203,13 +216,30 @@ def _count(
             raise SourceError(
                 f"{name} has {length} points, {key} has {count}",
                 where=container.where,
-                do="export the same points in every array",
+                do=_advice(container, arrays, layout, columns),
             )
     if not 0 < count <= MOST_POINTS:
         raise SourceError(
             f"holds {count} points", where=container.where, do="export at least one point"
         )
     return int(count)
+
+
+def _advice(
+    container: Container,
+    arrays: Mapping[str, Stored],
+    layout: Layout,
+    columns: Mapping[str, Any],
+) -> str:
+    """Say what to do about arrays that differ in length along the first axis."""
+    last = {stored.shape[-1] for stored in arrays.values() if len(stored.shape) == 3}
+    last |= {column.size for column in columns.values() if column.size != 1}
+    if layout.points == FIRST_AXIS and len(last) == 1:
+        return (
+            f'the point axis seems to be last ({last.pop()} points): say points = "{LAST_AXIS}" '
+            f"in a layout; ssaudit look {container.where} drafts one"
+        )
+    return "export the same points in every array"
 
 
 def _basis(arrays: Mapping[str, Stored], axes: Mapping[str, int]) -> str:

@@ -35,8 +35,8 @@ class SectionSurvey:
         A checksum of each model.
     basis : set of str
         How the readers knew rows from columns.
-    stated_digits : bool
-        Whether digits were stated.
+    digits_by : str
+        Where digits come from: "stated", the type of the arrays, or "inspection".
     turned : dict of int
         Points whose A looks transposed against those before, by file.
     """
@@ -46,7 +46,7 @@ class SectionSurvey:
     sizes: list[NDArray[np.int8]] = field(default_factory=list)
     prints: list[NDArray[np.uint64]] = field(default_factory=list)
     basis: set[str] = field(default_factory=set)
-    stated_digits: bool = False
+    digits_by: str = "inspection"
     turned: dict[str, int] = field(default_factory=dict)
     pattern: NDArray[np.bool_] | None = None
     file: str = ""
@@ -60,14 +60,18 @@ class Survey:
         self.bytes = 0
         self.sizes_kept = True
 
-    def add(self, number: int, batch: Batch, where: str) -> None:
-        """Take note of a batch of the section of a number."""
+    def add(self, number: int, batch: Batch, where: str, digits_by: str = "") -> None:
+        """Take note of a batch of the section of a number.
+
+        ``digits_by`` is the type that its digits are those of, "" where they were stated.
+        """
         section = self.sections.setdefault(number, SectionSurvey())
         matrices = {n: np.asarray(m[:]) for n, m in batch.section.matrices.items()}
         if not batch.section.states:
             return
         section.basis.add(batch.basis)
-        section.stated_digits = batch.section.digits is not None
+        if batch.section.digits is not None:
+            section.digits_by = digits_by or "stated"
         section.prints.append(checksums(matrices))
         self._keep_sizes(section, matrices)
         usable = batch.points.void == ""
@@ -204,7 +208,7 @@ def _described(section: Section, survey: SectionSurvey, usable: int) -> SectionF
         usable,
         section.dt,
         section.digits,
-        "" if section.digits is None else ("stated" if survey.stated_digits else "inspection"),
+        "" if section.digits is None else survey.digits_by,
         entries,
         weigh(
             section.states,

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from ssaudit.bank import Strings
 from ssaudit.errors import SourceError
+from ssaudit.intake.container import NARROW_DIGITS
 from ssaudit.intake.guard import as_words
 from ssaudit.intake.piece import parse_number
 
@@ -136,9 +137,16 @@ class Cells:
         return words, places
 
     def digits(self, most: int) -> tuple[int | None, int]:
-        """Most significant digits in the first cells, and how many cells were looked at."""
+        """Most significant digits in the first cells, and how many cells were looked at.
+
+        Numbers in a narrow type have those of the type, and need no looking at.
+        """
         if not self.is_text:
-            return None, 0
+            import pyarrow
+
+            kind = self.values.type.value_type if self.is_list else self.values.type
+            narrow = pyarrow.types.is_float32(kind) or pyarrow.types.is_float16(kind)
+            return (NARROW_DIGITS[kind.bit_width // 8] if narrow else None), 0
         texts = self.values.slice(0, most).to_pylist()
         return most_digits(texts, self.decimal), len(texts)
 

@@ -45,7 +45,8 @@ def look_text(look: Look, draft: bool = True) -> RenderableType:
             )
         )
     if draft:
-        parts += [Text(), Text(_printable_lines(look.draft), overflow="fold")]
+        # A line that is broken or cut is no TOML; one too long for the screen runs over its edge.
+        parts += [Text(), Text(_printable_lines(look.draft), no_wrap=True, overflow="ignore")]
     return Group(*parts)
 
 

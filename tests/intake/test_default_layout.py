@@ -206,7 +206,7 @@ def test_lengths_that_differ_are_an_error_of_the_file(write, take_in):
         ({"dt": np.nan}, "dt is nan"),
         ({"digits": 0}, "digits is 0"),
         ({"digits": 2.5}, "digits is 2.5"),
-        ({"A": np.zeros((N, 3, 3), complex)}, "A holds complex128, not real numbers"),
+        ({"A": np.zeros((N, 3, 3), complex)}, "A holds complex numbers, not real numbers"),
         ({"A": np.zeros((0, 3, 3))}, "has 12 points, A has 0"),
     ],
 )
@@ -458,3 +458,57 @@ def test_progress_is_told_in_bytes(write, tmp_path):
     size = path.stat().st_size
     assert seen[-1] == ("ingest", size, size)
     assert all(0 <= done <= total == size for _, done, total in seen)
+
+
+def test_a_point_axis_that_is_last_is_recognised(write, take_in):
+    content = {
+        "A": RNG.standard_normal((5, 5, 28)),
+        "B": RNG.standard_normal((5, 1, 28)),
+        "C": RNG.standard_normal((2, 5, 28)),
+    }
+    text = message(take_in, write({**content, "at_speed": np.arange(28.0)}))
+    assert 'the point axis seems to be last (28 points): say points = "last axis"' in text
+    assert "ssaudit look" in text
+    # Another number of points in one of them is no axis out of place.
+    text = message(take_in, write({**content, "at_speed": np.arange(27.0)}))
+    assert "export the same points in every array" in text
+    assert "last axis" not in text
+
+
+def test_matrices_of_other_names_are_listed(write, take_in):
+    A, B = RNG.standard_normal((4, 2, 2)), RNG.standard_normal((4, 2, 1))
+    text = message(take_in, write({"Amat": A, "Bmat": B}))
+    assert "it holds Amat, Bmat where arrays A, B, C, D" in text
+    assert "ssaudit look" in text
+    text = message(take_in, write({"Amat": A, "B": B}))
+    assert "A is missing (4 points); held and not used: Amat; say which is A in a layout" in text
+    assert "ssaudit look" in text
+
+
+def test_text_where_numbers_belong(write, take_in):
+    text = message(take_in, write({"A": np.full((2, 2, 2), "x")}))
+    assert "A holds text, not real numbers" in text
+
+
+def test_a_file_that_is_named_twice(write, take_in, monkeypatch):
+    path = write(export())
+    assert f"{path}: is named twice; name it once" in message(take_in, path, path)
+    folder = path.parent
+    (folder / "within").mkdir()
+    other = folder / "within" / ".." / path.name
+    assert f"is named twice, by {path} and by {other}" in message(take_in, path, other)
+    monkeypatch.chdir(folder)
+    assert "is named twice" in message(take_in, path, path.name)
+    assert "is named twice" in message(take_in, folder, path)
+    link = folder / f"link{path.suffix}"
+    link.symlink_to(path)
+    assert "is named twice" in message(take_in, path, link)
+
+
+def test_a_format_that_nothing_reads_is_told_with_those_that_are(tmp_path, take_in):
+    for name in ("m.mat", "m.bin"):
+        (tmp_path / name).write_bytes(b"\x00\x01" * 200)
+        text = message(take_in, tmp_path / name)
+        assert "is neither HDF5 nor NPZ; export one of the known formats: hdf5, npz, " in text
+    (tmp_path / "t.csv").write_text("a;b\n1;2\n")
+    assert "ssaudit look" in message(take_in, tmp_path / "t.csv")

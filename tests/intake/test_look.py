@@ -1,5 +1,6 @@
 """A look at an unknown export gives a draft that takes it in as it is."""
 
+import io
 import tomllib
 
 import h5py
@@ -11,6 +12,7 @@ from test_same_bank import EXACT
 
 from ssaudit.bank_file import read_bank
 from ssaudit.errors import SourceError
+from ssaudit.intake.draft import write_draft
 from ssaudit.intake.ingest import ingest
 from ssaudit.intake.look import look
 from ssaudit.report.look_text import look_text
@@ -177,3 +179,46 @@ def test_an_export_without_models_gives_a_draft_to_fill_in(tmp_path, name, conte
     assert found.contradictions
     assert "No state matrix was recognised" in found.draft
     tomllib.loads(found.draft)
+
+
+@pytest.mark.parametrize("width", [40, 80, 100])
+def test_the_draft_on_the_screen_is_the_draft(tmp_path, width):
+    names = np.array([f"a_rather_long_name_of_a_state_{k}" for k in range(6)])
+    np.savez(tmp_path / "a.npz", A=np.random.default_rng(1).standard_normal((6, 6, 9)),
+             states=names, at_v=np.arange(9.0), a_very_long_name_of_a_coordinate_or_not=np.arange(9.0))  # fmt: skip # noqa: E501
+    found = look(tmp_path / "a.npz")
+    screen = io.StringIO()
+    Console(file=screen, width=width, highlight=False).print(look_text(found), crop=False)
+    shown = screen.getvalue()
+    assert shown.endswith(found.draft)
+    assert tomllib.loads(shown[shown.index("# Draft layout") :]) == tomllib.loads(found.draft)
+    assert all(len(line) < 80 for line in found.draft.splitlines())
+
+
+def test_long_lists_and_remarks_of_a_draft_keep_to_the_width():
+    content = {
+        "format": "csv",
+        "points": "row",
+        "names": {"states": [f"state_{k}" for k in range(40)]},
+        "coordinates": {"speed": {"from": "v" * 50, "unit": "m/s"}},
+    }
+    remark = "what is to be read, and read again, " * 5
+    remarks = dict.fromkeys(["", "points", "names.states", "coordinates.speed"], remark)
+    draft = write_draft(content, remarks)
+    assert tomllib.loads(draft) == content
+    assert max(map(len, draft.splitlines())) < 80
+    told = " ".join(" ".join(draft.replace("#", " ").split()).split())
+    assert told.count("read again") == 4 * 5
+
+
+def test_a_suffix_that_holds_another_format_names_those_known(tmp_path):
+    (tmp_path / "m.mat").write_bytes(b"\x00\x01" * 200)
+    with pytest.raises(SourceError, match=r"known format \(\.mat\); known are hdf5, npz, parquet"):
+        look(tmp_path / "m.mat")
+
+
+def test_groups_at_the_top_are_told_in_plain_words(tmp_path):
+    with h5py.File(tmp_path / "g.h5", "w") as file:
+        for k in range(28):
+            file[f"p{k}/A"] = np.random.default_rng(k).standard_normal((2, 2))
+    assert "28 groups at the top: a point a group" in look(tmp_path / "g.h5").findings

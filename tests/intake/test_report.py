@@ -1,11 +1,13 @@
 """The intake report: what it says is right, suspects are flagged and kept, it fits a screen."""
 
+import io
 import json
 
 import intake_writers as writers
 import numpy as np
 import pytest
 from rich.console import Console
+from rich.text import Text
 
 from ssaudit.bank_arrays import build_bank
 from ssaudit.bank_file import read_bank
@@ -13,7 +15,7 @@ from ssaudit.intake.envelope import describe_coordinates, find_grid, levels
 from ssaudit.intake.ingest import ingest
 from ssaudit.intake.orientation import BY_LABELS, BY_SHAPES, looks_turned, weigh
 from ssaudit.intake.survey import checksums, code_sizes
-from ssaudit.report.intake_text import intake_text
+from ssaudit.report.intake_text import _wrapped, intake_text
 
 RNG = np.random.default_rng(51)
 
@@ -210,7 +212,7 @@ def test_one_file_of_many_that_is_transposed(tmp_path):
         np.savez(tmp_path / f"p{k}.npz", A=A.T if k == 4 else A)
     found = ingest([tmp_path], revision="R", bank=tmp_path / "bank.h5").report
     assert any(
-        note == "A of 1 points looks transposed against the others, first in p4.npz"
+        note == "A of 1 point looks transposed against the others, first in p4.npz"
         for note in found.notes
     )
     usual = np.array([[0, 1], [1, 1]]) > 0
@@ -255,3 +257,79 @@ def test_the_worst_of_exports_still_fits_the_screen(tmp_path):
     assert len(lines) <= 40
     assert not any("\x1b" in line for line in lines)
     assert any("other sections" in line for line in lines)
+
+
+def lines_at(intake, width):
+    screen = io.StringIO()
+    Console(file=screen, width=width, markup=False, highlight=False).print(intake_text(intake))
+    return screen.getvalue().splitlines()
+
+
+@pytest.mark.parametrize("width", [60, 80, 100, 120])
+def test_lines_are_broken_between_words_and_not_padded(tmp_path, content, width):
+    names = [f"long_name_of_state_{k}" for k in range(3)]
+    content["states"] = np.array(names)
+    content["A"][42, 1, 2] *= 1000.0
+    np.savez(tmp_path / "a.npz", **content)
+    intake = ingest([tmp_path / "a.npz"], revision="R", bank=tmp_path / "bank.h5")
+    lines = lines_at(intake, width)
+    assert all(line == line.rstrip() and len(line) <= width for line in lines)
+    assert len(lines) <= 40
+    # Nothing is lost on the way: what was broken reads on below.
+    text = " ".join(" ".join(lines).split())
+    jump = intake.report.suspects.jump_examples[0]
+    for words in (*names, f"{jump.value:.4g}"[:5], "times greater than at its neighbours",
+                  "5.000 to 24.00 m/s, 20 values in steps of 1.000"):  # fmt: skip
+        assert words in text
+    # Continuation lines stand below their column.
+    at = next(k for k, line in enumerate(lines) if line.startswith("models"))
+    assert all(line.startswith(" " * 11) for line in lines[at + 1 : at + 4])
+
+
+def test_what_is_left_out_shows_an_ellipsis_behind_a_whole_word():
+    console = Console(width=40, file=io.StringIO())
+    words = [f"word{k}" for k in range(100)]
+    shown = _wrapped(Text(" ".join(words)), console, 30, 2)
+    assert len(shown) == 2
+    text = " ".join(line.plain for line in shown)
+    assert text.endswith(" …")
+    kept = text.split()[:-1]
+    assert kept == words[: len(kept)]
+    assert all(line.cell_len <= 30 for line in shown)
+    (cut,) = _wrapped(Text("x" * 50), console, 30, 1)
+    assert cut.plain == "x" * 28 + " …"
+
+
+def test_no_further_points_coincide_where_some_are_void_for_it(report, content, tmp_path):
+    np.savez(tmp_path / "a.npz", **content)
+    clean = ingest([tmp_path / "a.npz"], revision="R", bank=tmp_path / "bank.h5")
+    assert any(line.endswith("no points coincide") for line in lines_at(clean, 100))
+    content["at_speed"][1], content["at_mass"][1] = content["at_speed"][0], content["at_mass"][0]
+    np.savez(tmp_path / "a.npz", **content)
+    twice = ingest([tmp_path / "a.npz"], revision="R", bank=tmp_path / "bank.h5")
+    assert any(line.endswith("no further points coincide") for line in lines_at(twice, 100))
+
+
+def test_one_of_a_kind_is_not_called_many(tmp_path):
+    A = RNG.standard_normal((1, 1, 1))
+    np.savez(tmp_path / "a.npz", A=A, B=A, digits=1)
+    intake = ingest([tmp_path / "a.npz"], revision="R", bank=tmp_path / "bank.h5")
+    text = "\n".join(lines_at(intake, 100))
+    assert "1 point: 1 state, 1 input, 0 outputs; continuous; 1 digit (stated)" in text
+    assert "from 1 file" in text
+
+
+@pytest.mark.parametrize(
+    ("values", "words"),
+    [
+        (RNG.uniform(size=5000), "5000 values, scattered"),
+        (RNG.uniform(size=400) ** 3, "400 values, scattered"),
+        (np.arange(5000.0), "5000 values in steps of 1.000"),
+        (np.array([1.0, 10, 100, 1000]), "4 values in steps of 9.000 to 900.0"),
+        (np.array([80.0, 90, 100, 120]), "4 values in steps of 10.00 to 20.00"),
+    ],
+)
+def test_scattered_values_are_called_so(tmp_path, values, words):
+    np.savez(tmp_path / "a.npz", A=RNG.standard_normal((len(values), 1, 1)), at_v=values)
+    intake = ingest([tmp_path / "a.npz"], revision="R", bank=tmp_path / "bank.h5")
+    assert any(line.endswith(words) for line in lines_at(intake, 100))
