@@ -22,9 +22,9 @@ from ssaudit.summary import Summary, Tally
 if TYPE_CHECKING:
     import pandas as pd
 
-# Bytes of state matrices in one chunk: small enough for the processor's cache, large enough that
+# Bytes of state matrices in one chunk: small enough to bound memory, large enough that
 # handing chunks over costs nothing.
-CHUNK_BYTES = 2_000_000
+CHUNK_BYTES = 4_000_000
 # Margins take milliseconds a point, so that few points keep a worker busy.
 MARGIN_POINTS = 64
 # Chunks in flight beyond the one that each worker holds.

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any, NoReturn
 
 from ssaudit import __version__
 from ssaudit.errors import SsauditError
+from ssaudit.tuning import tune_process
 
 if TYPE_CHECKING:
     from rich.console import RenderableType
@@ -44,10 +45,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         0: all ok; 1: finished, and something is not ok; 2: could not run; 130: interrupted.
     """
     options = _parser().parse_args(arguments)
-    # Workers share the cores among them; more threads inside each would only contend. It has to
-    # be set before numpy is first imported.
-    for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
-        os.environ.setdefault(name, "1")
+    tune_process()
     command: Callable[[argparse.Namespace], int] = options.command
     try:
         return command(options)

@@ -263,7 +263,7 @@ def _slice_radii(
         better = _smaller(even, radii[again])
         radii[again[better]], isolated[again[better]] = even[better], apart[better]
     reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
-    scales = balance_scaling(A[reaching])
+    scales = balance_scaling(A[reaching]) if reaching.any() else ()
     for i, scale in zip(np.flatnonzero(reaching), scales, strict=True):
         tighter = cluster_radii(A[i], poles[i], None if E is None else E[i], scale)
         if _smaller(tighter, radii[i]):
