@@ -145,7 +145,7 @@ def test_unstable_plant_at_a_point(tmp_path, export, command):
     assert 2.0 * span["from"] == pytest.approx(7.5, rel=1e-12)
     assert span["to"] is None
     shown = command("point", files[0], "--loop", files[1], "--id", "p")
-    assert "stable for 3.75 to inf" in shown.out
+    assert "stable for 3.750 to inf" in shown.out
 
 
 def test_disk_margin(margins):
