@@ -96,6 +96,8 @@ class CommonRange:
         Ends of the range.
     low_point, high_point : str
         The points that set them; "" where there is no end.
+    unknown : int
+        Stable points at which the numbers do not decide the range, and which it leaves out.
     """
 
     loop: str
@@ -103,6 +105,7 @@ class CommonRange:
     high: float
     low_point: str
     high_point: str
+    unknown: int = 0
 
     def narrowed(
         self, low: NDArray[np.float64], high: NDArray[np.float64], points: NDArray[Any]
@@ -231,17 +234,26 @@ class Tally:
         if "gain_factor_low" not in points:
             return
         names = points["point"]
-        self._narrow("", points["gain_factor_low"], points["gain_factor_high"], names)
+        stable = points["stable_inside"] == 1
+        self._narrow("", points["gain_factor_low"], points["gain_factor_high"], names, stable)
         for loop in dict.fromkeys(loops["loop"]) if loops else ():
             rows = loops["loop"] == loop
             ends = (loops["gain_factor_low"][rows], loops["gain_factor_high"][rows])
-            self._narrow(loop, *ends, names[loops["row"][rows]])
+            of = loops["row"][rows]
+            self._narrow(loop, *ends, names[of], stable[of])
 
     def _narrow(
-        self, loop: str, low: NDArray[np.float64], high: NDArray[np.float64], names: NDArray[Any]
+        self,
+        loop: str,
+        low: NDArray[np.float64],
+        high: NDArray[np.float64],
+        names: NDArray[Any],
+        stable: NDArray[np.bool_],
     ) -> None:
         before = self._ranges.get(loop) or CommonRange(loop, -np.inf, np.inf, "", "")
-        self._ranges[loop] = before.narrowed(low, high, names)
+        unknown = int(np.count_nonzero(stable & (np.isnan(low) | np.isnan(high))))
+        found = before.narrowed(low, high, names)
+        self._ranges[loop] = replace(found, unknown=before.unknown + unknown)
 
     def add(
         self,

@@ -156,3 +156,31 @@ def test_many_different_void_reasons_are_told_apart_up_to_a_limit() -> None:
     assert len(summary.void) == 1001
     assert summary.void["other reasons"] == 5
     assert sum(summary.void.values()) == summary.counts["void"] == n
+
+
+def test_common_range_of_a_factor_and_the_points_that_set_it() -> None:
+    """L = c/(s + a) is stable for factors above -a/c, or below it where c is negative."""
+    A = np.array([-1.0, -2.0, -0.5, 9.0])[:, None, None]
+    B = np.array([1.0, -1.0, 1.0, 1.0])[:, None, None]
+    bank = ssaudit.build_bank(A, B, revision="A", ids=["a", "b", "c", "lost"])
+    loop = ssaudit.Loop("negative", ssaudit.ConstantGain([[1.0]]))
+    for chunk in (1, 4):
+        found = ssaudit.audit(bank, loop, ssaudit.Criteria(), depth="margins", chunk=chunk)
+        for common in found.summary.ranges:
+            assert (common.low, common.high) == (pytest.approx(-0.5), pytest.approx(2.0))
+            assert (common.low_point, common.high_point) == ("c", "b")
+            assert common.unknown == 0
+        assert [common.loop for common in found.summary.ranges] == ["", "input u1", "signal x1"]
+
+
+def test_a_range_that_the_numbers_do_not_decide_is_counted() -> None:
+    points = {
+        "point": np.array(["a", "b", "c"], dtype=object),
+        "stable_inside": np.array([1, 1, 0], dtype=np.int8),
+        "gain_factor_low": np.array([0.5, np.nan, np.nan]),
+        "gain_factor_high": np.array([2.0, np.nan, np.nan]),
+    }
+    tally = Tally("A", ssaudit.Criteria(), 1)
+    tally.add_loops(points, {})
+    (common,) = tally._ranges.values()
+    assert (common.low, common.high, common.unknown) == (0.5, 2.0, 1)

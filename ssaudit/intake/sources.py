@@ -12,7 +12,7 @@ from ssaudit.errors import SourceError
 from ssaudit.intake.container import Container
 from ssaudit.intake.guard import check_regular
 from ssaudit.intake.hdf5 import open_hdf5
-from ssaudit.intake.layout import GROUP, SUFFIXES, Layout, default_layout
+from ssaudit.intake.layout import SUFFIXES, Layout, default_layout
 from ssaudit.intake.npz import open_npz
 
 HDF5_MAGIC = b"\x89HDF\r\n\x1a\n"
@@ -257,11 +257,6 @@ def check_format(path: Path, layout: Layout) -> None:
         raise SourceError(
             says, where=str(path), do=f'{layout.name} says format = "{layout.format}"'
         )
-
-
-def counts_groups(layout: Layout) -> bool:
-    """Whether points are counted by groups."""
-    return layout.points == GROUP
 
 
 def file_digest(path: Path) -> str:

@@ -3,7 +3,7 @@
 from dataclasses import dataclass
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import ArrayLike
 
 from ssaudit.margins.balance import balance_loop
 from ssaudit.margins.crossings import WIDEST_SQUARED, find_crossings
@@ -190,40 +190,6 @@ def find_stable_gains(
     ends[3, owner, place] = frequency[owner, column + 1]
     ends[:, crossings.failed] = np.nan
     return StableGains(ends[0], ends[1], ends[2], ends[3], ~crossings.failed)
-
-
-def intersect_ranges(
-    found: GainRange,
-) -> tuple[float, float, NDArray[np.intp], NDArray[np.intp]]:
-    """Interval of the factor common to an envelope, and the points that set its ends.
-
-    Parameters
-    ----------
-    found : GainRange
-        The range at each point.
-
-    Returns
-    -------
-    low, high : float
-        Ends of the common interval; NaN where any point is lost or not confirmed.
-    low_points, high_points : (any,) int
-        Points that set the ends, to 1e-9; none where the end is infinite. Of a NaN result both
-        name the points that have no range.
-
-    Examples
-    --------
-    >>> one = np.ones((2, 1, 1))
-    >>> A = one * [[[-1.0]], [[-2.0]]]
-    >>> intersect_ranges(find_gain_range(A, one, one, 0 * one))
-    (-1.0, inf, array([0]), array([], dtype=int64))
-    """
-    missing = np.nonzero(np.isnan(found.low) | np.isnan(found.high))[0]
-    if len(missing):
-        return np.nan, np.nan, missing, missing
-    low, high = float(found.low.max(initial=-np.inf)), float(found.high.min(initial=np.inf))
-    at_low = np.isfinite(found.low) & (found.low >= low - 1e-9 * abs(low))
-    at_high = np.isfinite(found.high) & (found.high <= high + 1e-9 * abs(high))
-    return low, high, np.nonzero(at_low)[0], np.nonzero(at_high)[0]
 
 
 def locate_crossings(loop: StateSpace, dt: float) -> GainCrossings:

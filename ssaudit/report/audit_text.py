@@ -191,6 +191,8 @@ def _margins(summary: Summary) -> list[Text]:
             )
         ]
         text = f"all gains by one factor, at every stable point: {ends[0]} to {ends[1]}"
+        if common.unknown:
+            text = f"at {common.unknown} stable points not decided; {text}"
         lines.append(one_line(text))
     return lines
 

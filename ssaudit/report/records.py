@@ -87,6 +87,7 @@ def audit_record(report: AuditReport) -> dict[str, Any]:
                 "to": finite(common.high),
                 "from_point": common.low_point or None,
                 "to_point": common.high_point or None,
+                "unknown": common.unknown,
             }
             for common in summary.ranges
         ],

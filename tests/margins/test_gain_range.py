@@ -3,7 +3,7 @@ from fractions import Fraction
 import numpy as np
 import pytest
 
-from ssaudit.margins.gain_range import find_gain_range, find_stable_gains, intersect_ranges
+from ssaudit.margins.gain_range import find_gain_range, find_stable_gains
 
 
 def is_hurwitz(coefficients):
@@ -216,17 +216,3 @@ def test_widely_spread_poles(tools):
     found = find_gain_range(A, B, C, np.zeros((1, 1, 1)))
     assert found.high[0] == pytest.approx(8, rel=1e-6)
     assert found.high_frequency[0] == pytest.approx(np.sqrt(3) * 1e-5, rel=1e-6)
-
-
-def test_common_range_and_who_sets_it():
-    one = np.ones((3, 1, 1))
-    A = one * [[[-1.0]], [[-2.0]], [[-0.5]]]
-    found = find_gain_range(A, one, one * [[[1.0]], [[-1.0]], [[1.0]]], 0 * one)
-    low, high, low_points, high_points = intersect_ranges(found)
-    assert (low, high) == (pytest.approx(-0.5), pytest.approx(2.0))
-    np.testing.assert_array_equal(low_points, [2])
-    np.testing.assert_array_equal(high_points, [1])
-    lost = find_gain_range(A + 9 * one * [[[0.0]], [[0]], [[1]]], one, one, 0 * one)
-    low, high, low_points, _ = intersect_ranges(lost)
-    assert np.isnan([low, high]).all()
-    np.testing.assert_array_equal(low_points, [2])
