@@ -2,7 +2,7 @@
 
 import os
 from collections import deque
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
 from itertools import islice
@@ -17,6 +17,7 @@ from ssaudit.criteria import Criteria
 from ssaudit.errors import BankError, SsauditError
 from ssaudit.loop.model import Loop
 from ssaudit.modes.proof import import_flint
+from ssaudit.progress import Progress
 from ssaudit.summary import Summary, Tally
 
 if TYPE_CHECKING:
@@ -29,7 +30,6 @@ CHUNK_BYTES = 4_000_000
 MARGIN_POINTS = 64
 # Chunks in flight beyond the one that each worker holds.
 AHEAD = 2
-Progress = Callable[[str, int, int], None]
 
 
 @dataclass(frozen=True, eq=False)

@@ -2,7 +2,7 @@
 
 from collections.abc import Container, Mapping
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 from ssaudit.bank import Matrices, Points, Section
 from ssaudit.columns import Columns, loop_columns, mode_columns, point_columns
 from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
-from ssaudit.distances import Distances, find_distances
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
 from ssaudit.loop.closing import ClosedModels
 from ssaudit.loop.model import SIGNS, Loop
@@ -20,6 +19,9 @@ from ssaudit.modes.radii import closed_loop_entry_error, rounding_error
 from ssaudit.modes.stacked import find_usable_modes
 from ssaudit.outside import seen_from_outside
 from ssaudit.settling import apply_proofs, settle
+
+if TYPE_CHECKING:
+    from ssaudit.distances import Distances
 
 Floats = NDArray[np.float64]
 DEPTHS = ("poles", "modes", "margins")
@@ -129,12 +131,11 @@ def audit_chunk(
     closed = settings.loop.close(section, points, matrices)
     chunk = _Chunk(section, matrices, closed, settings)
     deep = settings.depth != "poles"
-    everywhere = np.arange(len(points))
     E = chunk.mass
     modes, failed = find_usable_modes(
         closed.A,
         closed.void == "",
-        chunk.entry_error(everywhere) if deep else None,
+        chunk.entry_error if deep else None,
         E=E,
         mass_error=None if E is None else chunk.mass_error(E),
         dt=closed.dt,
@@ -320,8 +321,10 @@ class _Chunk:
             outcomes[int(row)] = (proof.outcome, proof.how)
         return outcomes
 
-    def distances(self) -> Distances:
+    def distances(self) -> "Distances":
         """Distances to trouble of all rows; NaN at void points and descriptor models."""
+        from ssaudit.distances import find_distances
+
         wanted = self.closed.void == ""
         if self.mass is not None:
             wanted[:] = False

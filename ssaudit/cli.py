@@ -17,7 +17,7 @@ from ssaudit.tuning import tune_process
 if TYPE_CHECKING:
     from rich.console import RenderableType
 
-    from ssaudit.auditing import Progress
+    from ssaudit.progress import Progress
 
 OK, NOT_OK, CANNOT_RUN, INTERRUPTED = 0, 1, 2, 130
 # Where the width of the output is not known, as in a file.
@@ -448,7 +448,7 @@ def _print(text: str) -> None:
 @contextmanager
 def _progress() -> Iterator["Progress"]:
     """Show progress on stderr, and none where nobody watches."""
-    from ssaudit.intake.ingest import no_progress
+    from ssaudit.progress import no_progress
 
     if sys.stderr is None or not sys.stderr.isatty():
         yield no_progress

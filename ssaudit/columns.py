@@ -1,14 +1,13 @@
 """Columns of the points and the modes table, as they stand in the ledger."""
 
 from collections.abc import Sequence
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import Points
 from ssaudit.criteria import Criteria
-from ssaudit.distances import Distances
 from ssaudit.judging import LOST, VERDICTS, VOID, Judgement, missed_names
 from ssaudit.loop.closing import ClosedModels
 from ssaudit.modes.participation import TOP, state_names
@@ -19,6 +18,9 @@ from ssaudit.modes.quantities import (
     time_constant,
 )
 from ssaudit.modes.stacked import Modes
+
+if TYPE_CHECKING:
+    from ssaudit.distances import Distances
 
 Columns = dict[str, NDArray[Any]]
 
@@ -120,7 +122,7 @@ def mode_columns(closed: ClosedModels, modes: Modes) -> Columns:
     return columns
 
 
-def loop_columns(distances: Distances | None) -> Columns:
+def loop_columns(distances: "Distances | None") -> Columns:
     """Columns of the loops table: a row a single loop of a point, ``row`` the point's row.
 
     Parameters

@@ -1,17 +1,19 @@
 """Judging stacked modes by criteria: one verdict a point, with the reason."""
 
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import Points
 from ssaudit.criteria import STABILITY, Criteria, Requirement
-from ssaudit.distances import Distances
 from ssaudit.modes.quantities import damping_ratio, natural_frequency, time_constant
 from ssaudit.modes.radii import damping_ratio_radius
 from ssaudit.modes.stacked import Modes, distinct_rows
+
+if TYPE_CHECKING:
+    from ssaudit.distances import Distances
 
 Floats = NDArray[np.float64]
 # Peaks and radii are found to 1e-7 of themselves; a verdict nearer to its limit is in doubt.
@@ -124,7 +126,7 @@ def judge(
     points: Points,
     void: NDArray[np.object_],
     criteria: Criteria,
-    distances: Distances | None = None,
+    distances: "Distances | None" = None,
 ) -> Judgement:
     """Judge some points by criteria.
 
@@ -268,7 +270,7 @@ def _judge_requirement(
 
 def _judge_distance(
     requirement: Requirement,
-    distances: Distances,
+    distances: "Distances",
     inside: NDArray[np.bool_],
     mode: NDArray[np.int64],
 ) -> _Result:

@@ -6,16 +6,16 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from ssaudit.auditing import Progress
 from ssaudit.bank_file import read_bank
 from ssaudit.chunk import DEPTHS, PROVE
 from ssaudit.criteria import read_criteria
 from ssaudit.errors import LedgerError, PipelineError
-from ssaudit.intake.ingest import Intake, ingest, no_progress
+from ssaudit.intake.ingest import Intake, ingest
 from ssaudit.intake.layout import read_layout
 from ssaudit.intake.sources import find_files
 from ssaudit.ledger import find_run
 from ssaudit.loop.files import read_loop
+from ssaudit.progress import Progress, no_progress
 from ssaudit.settings import check_keys, nearest, read_toml, take, take_words
 from ssaudit.stages import AuditReport, Comparison, compare_runs, stream_audit
 

@@ -1,6 +1,6 @@
 """Settling verdicts by evidence beside the poles: cross-checks, exact grounds, proofs."""
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -10,10 +10,9 @@ from ssaudit.criteria import CROSS_CHECK, STABILITY
 from ssaudit.judging import DOUBT, LOST, ON_AXIS, ON_CIRCLE, VOID, Judgement
 from ssaudit.modes.evidence import DISAGREEMENTS, GROUNDS, cross_check, exact_not_stable
 from ssaudit.modes.neutral import grows_at_rest, neutral_states
-from ssaudit.modes.stacked import Modes
+from ssaudit.modes.stacked import ErrorsOf, Modes
 
 Floats = NDArray[np.float64]
-ErrorsOf = Callable[[NDArray[np.int64]], Floats | None]
 
 
 def settle(

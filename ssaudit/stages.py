@@ -6,13 +6,14 @@ from contextlib import ExitStack
 from dataclasses import dataclass
 from typing import Any
 
-from ssaudit.auditing import Progress, audit_parts
+from ssaudit.auditing import audit_parts
 from ssaudit.bank import ModelBank
 from ssaudit.criteria import Criteria
 from ssaudit.csv_table import CsvWriter
 from ssaudit.drifting import TOLERANCE, Drift, drift
 from ssaudit.ledger import LoggedRun, find_logged, find_run
 from ssaudit.loop.model import Loop
+from ssaudit.progress import Progress
 from ssaudit.provenance import describe_run, run_digest
 from ssaudit.run_writer import RunWriter
 from ssaudit.summary import Summary, Tally

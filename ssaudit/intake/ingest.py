@@ -38,12 +38,7 @@ from ssaudit.intake.stacked import stacked_pieces
 from ssaudit.intake.survey import Survey
 from ssaudit.intake.table import Table
 from ssaudit.intake.unused import listed
-
-Progress = Callable[[str, int, int], None]
-
-
-def no_progress(stage: str, done: int, total: int) -> None:
-    """Report nothing: what is used where nobody watches."""
+from ssaudit.progress import Progress, no_progress
 
 
 @dataclass(frozen=True, eq=False)

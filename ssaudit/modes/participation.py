@@ -96,16 +96,19 @@ def top_states(
     modes, states = factors.shape
     index = np.full((modes, count), -1, dtype=np.int64)
     share = np.full((modes, count), np.nan)
-    left = factors.copy()
-    left[np.isnan(factors[:, :1]).ravel()] = -1.0
-    flat, rows = left.reshape(-1), np.arange(modes) * states
+    # Positive floating-point numbers are in order when read as integers. With the state's number in
+    # the last bits, the largest names its state, and of equal ones the first is taken.
+    mask = (1 << max(1, (states - 1).bit_length())) - 1
+    known = np.where(factors > 0, factors, 0.0).T.copy().view(np.int64)
+    keys = (known & ~mask | (mask - np.arange(states))[:, np.newaxis]).view(np.float64)
+    rows = np.arange(modes)
     for place in range(min(count, states)):
-        best = left.argmax(axis=1)
-        largest = flat[rows + best]
-        found = largest > 0
-        index[:, place] = np.where(found, best, -1)
-        share[:, place] = np.where(found, largest, np.nan)
-        flat[rows + best] = -1.0
+        largest = keys.max(axis=0)
+        best = mask - (largest.view(np.int64) & mask)
+        found = factors[rows, best]
+        index[:, place] = np.where(found > 0, best, -1)
+        share[:, place] = np.where(found > 0, found, np.nan)
+        keys[best, rows] = -1.0
     return index, share
 
 
@@ -137,5 +140,5 @@ def state_names(index: NDArray[np.int64], states: Sequence[str]) -> NDArray[np.o
     texts = np.empty(len(codes), dtype=object)
     # A name that holds the separator itself would read as two.
     plain = [name.replace(", ", ",") for name in states]
-    texts[:] = [", ".join(plain[i] for i in index[row] if i >= 0) for row in first]
+    texts[:] = [", ".join([plain[i] for i in row if i >= 0]) for row in index[first].tolist()]
     return np.asarray(texts[inverse], dtype=object)

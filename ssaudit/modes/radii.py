@@ -252,14 +252,20 @@ def pole_radii(
 def _slice_radii(
     A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None, distance: Floats
 ) -> Floats:
-    """Radii (points, n) of a stack small enough for the cache."""
-    F = coupling_bound(A, poles, V, W, E)
-    gap = np.abs(poles[:, :, None] - poles[:, None, :])
-    np.einsum("pii->pi", gap)[:] = np.inf
+    """Radii (points, n) of a stack small enough for the cache.
+
+    The bound and the gaps have the points last: sums and extremes over a few rows or columns then
+    run along the points, several times faster.
+    """
+    F = _coupling_bound(A, poles, V, W, E)
+    across = np.ascontiguousarray(poles.T)
+    gap = np.abs(across[:, None] - across[None, :])
+    np.einsum("iip->ip", gap)[:] = np.inf
     radii, isolated = _disk_radii(F, gap, poles)
-    again = np.flatnonzero((~(radii < distance)).any(axis=1) & np.isfinite(F).all(axis=(1, 2)))
+    again = np.flatnonzero((~(radii < distance)).any(axis=1) & np.isfinite(F).all(axis=(0, 1)))
     if again.size:
-        even, apart = _disk_radii(even_rows(F[again]), gap[again], poles[again])
+        even = even_rows(np.moveaxis(F[..., again], -1, 0))
+        even, apart = _disk_radii(np.moveaxis(even, 0, -1), gap[..., again], poles[again])
         better = _smaller(even, radii[again])
         radii[again[better]], isolated[again[better]] = even[better], apart[better]
     reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
@@ -314,12 +320,17 @@ def even_rows(F: Floats) -> Floats:
 
 
 def _disk_radii(F: Floats, gap: Floats, poles: Complexes) -> tuple[Floats, NDArray[np.bool_]]:
-    """Radii of Gershgorin's disks, shared in overlapping groups, and which disks stand alone."""
+    """Radii of Gershgorin's disks, shared in overlapping groups, and which disks stand alone.
+
+    F and the gaps are (n, n, points), all else (points, n).
+    """
     radii, isolated = _isolated_radii(F, gap)
+    radii, isolated = radii.T.copy(), isolated.T.copy()
     loose = np.flatnonzero(~isolated.all(axis=1))
     if loose.size:
-        plain = F[loose].sum(axis=-1)
-        grouped = gather_components(poles[loose], poles[loose], plain, gap[loose])
+        plain = F[..., loose].sum(axis=1).T
+        gaps = np.moveaxis(gap[..., loose], -1, 0)
+        grouped = gather_components(poles[loose], poles[loose], plain, gaps)
         radii[loose] = np.where(isolated[loose], radii[loose], grouped)
     radii[np.isnan(radii)] = np.inf
     return radii, isolated
@@ -350,8 +361,15 @@ def coupling_bound(
     >>> coupling_bound(-one, np.array([[-1.0 + 0j]]), one + 0j, one + 0j, 0.1 * one).round(6)
     array([[[0.1]]])
     """
+    return np.moveaxis(_coupling_bound(A, poles, V, W, E), -1, 0)
+
+
+def _coupling_bound(
+    A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None
+) -> Floats:
+    """`coupling_bound` as (n, n, points)."""
     points, n = poles.shape
-    gamma = (n + 4) * EPS
+    gamma, ones = (n + 4) * EPS, np.ones((n, 1))
     size = np.abs(V)
     # A is real: a real product of twice the columns costs half of a complex one.
     residual = (A @ V.view(float).reshape(points, n, 2 * n)).view(complex)
@@ -363,32 +381,33 @@ def coupling_bound(
     outer += known @ size
     outer += (gamma * np.abs(poles))[:, None, :] * size
     left_size = np.abs(W)
-    F = left_size @ outer
+    F = np.ascontiguousarray((left_size @ outer).transpose(1, 2, 0))
     product = W @ V
     np.einsum("pii->pi", product)[:] -= 1.0
-    defect = np.abs(product).sum(axis=-1)
-    defect += gamma * (left_size @ size.sum(axis=-1)[..., None])[..., 0]
-    worst = defect.max(axis=-1)
+    # Sums over a row, as products with ones, which are several times faster.
+    defect = (np.abs(product) @ ones + gamma * (left_size @ (size @ ones)))[..., 0].T
+    worst = defect.max(axis=0)
     factor = np.where(worst <= MAX_INVERSE_DEFECT, 1.0 / (1.0 - worst), np.inf)
-    F += (defect * factor[:, None])[:, :, None] * F.max(axis=1)[:, None, :]
+    F += (defect * factor)[:, None, :] * F.max(axis=0)
     # The bound's own sums are rounded too; all terms are positive, so a relative margin does.
-    bound: Floats = F * (1.0 + 8 * gamma)
-    return bound
+    F *= 1.0 + 8 * gamma
+    return F
 
 
 def _isolated_radii(F: Floats, gap: Floats) -> tuple[Floats, NDArray[np.bool_]]:
     """Gershgorin radii after scaling row i by the smallest factor that frees disk i of the others.
 
     Scaling row i by a and column i by 1/a leaves the poles. With a = max_j 2 F_ji / gap_ij, F_ji/a
-    takes at most half of each gap; the disk is free if the rest fits into the other half.
+    takes at most half of each gap; the disk is free if the rest fits into the other half. F and the
+    gaps are (n, n, points), the results (n, points).
     """
-    n = F.shape[-1]
-    diagonal = np.einsum("pii->pi", F)
-    rows = F.sum(axis=-1)
-    scale = (2.0 * F / gap).max(axis=1)
+    n = len(F)
+    diagonal = np.einsum("iip->ip", F)
+    rows = F.sum(axis=1)
+    scale = (2.0 * F / gap).max(axis=0)
     radii = diagonal + np.minimum(scale, 1.0) * (rows - diagonal)
     radii *= 1.0 + 8 * n * EPS
-    room = (0.5 * gap - rows[:, None, :]).min(axis=-1)
+    room = (0.5 * gap - rows[None]).min(axis=1)
     return radii, radii < room
 
 

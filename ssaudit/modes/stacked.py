@@ -1,6 +1,6 @@
 """Modes of a chunk: poles, and where asked their vectors, participation and radii."""
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,9 +10,11 @@ from ssaudit.modes.neutral import neutral_states
 from ssaudit.modes.participation import TOP, participation_of_modes, top_states
 from ssaudit.modes.poles import find_modes, find_poles
 from ssaudit.modes.quantities import continuous_poles
-from ssaudit.modes.radii import continuous_radius, pole_radii
+from ssaudit.modes.radii import SLICE_ENTRIES, continuous_radius, pole_radii
 
 Floats = NDArray[np.float64]
+ErrorsOf = Callable[[NDArray[np.int64]], Floats | None]
+"""From rows of a stack to how far each entry of their matrices may be off; None: not at all."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -77,7 +79,7 @@ NOT_CONVERGED = "the eigenvalue iteration did not converge"
 def find_usable_modes(
     A: Floats,
     usable: NDArray[np.bool_],
-    entry_error: Floats | None,
+    entry_error: ErrorsOf | None = None,
     *,
     E: Floats | None = None,
     mass_error: Floats | None = None,
@@ -93,8 +95,8 @@ def find_usable_modes(
         Closed-loop state matrices.
     usable : (points,) bool
         Points to look at; the others get NaN.
-    entry_error : (points, n, n) float or None
-        How far each entry of A may be off; None: A is exact.
+    entry_error : callable, optional
+        How far each entry of A may be off, by rows: (rows, n, n) float. None: A is exact.
     E : (points, n, n) float, optional
         Left-hand matrices of descriptor models E x' = A x.
     mass_error : (points, n, n) float, optional
@@ -115,8 +117,7 @@ def find_usable_modes(
 
     Examples
     --------
-    >>> modes, failed = find_usable_modes(np.array([[[0.0, 1.0], [-4.0, 0.0]]]), np.array([True]),
-    ...                                   None)
+    >>> modes, failed = find_usable_modes(np.array([[[0.0, 1.0], [-4.0, 0.0]]]), np.array([True]))
     >>> modes.s, modes.index[0, 0]
     (array([[0.+2.j, 0.-2.j]]), array([ 0,  1, -1]))
     """
@@ -127,7 +128,10 @@ def find_usable_modes(
     else:
         left_out = neutral_states(A, np.array(neutral, dtype=np.int64), dt > 0)
         for rows, kept in _alike(left_out, usable):
-            _find_alike(found, A, rows, kept, entry_error, dt)
+            # Vectors of a few points at a time stay in the processor's cache until they are used.
+            step = max(1, SLICE_ENTRIES // max(1, len(kept)) ** 2)
+            for start in range(0, len(rows), step):
+                _find_alike(found, A, rows[start : start + step], kept, entry_error, dt)
     failed = found.unsolved != ""
     poles, radius = found.poles, found.radius
     rest = (found.index, found.share, found.infinite if E is not None else None, found.unsolved)
@@ -184,12 +188,12 @@ def _find_alike(
     A: Floats,
     rows: NDArray[np.int64],
     kept: NDArray[np.int64],
-    entry_error: Floats | None,
+    entry_error: ErrorsOf | None,
     dt: float,
 ) -> None:
     """Enter the modes of ordinary models that keep the same states."""
-    k, whole = len(kept), len(rows) == len(A) and len(kept) == A.shape[1]
-    part = A if whole else A[rows][:, kept][:, :, kept]
+    k, whole = len(kept), len(kept) == A.shape[1]
+    part = A[rows] if whole else A[rows][:, kept][:, :, kept]
     if found.index is None:
         found.poles[rows, :k], failed = find_poles(part)
         largest = np.abs(part).max(axis=(1, 2), initial=0.0)
@@ -197,7 +201,9 @@ def _find_alike(
     else:
         poles, right, left, failed = find_modes(part)
         found.poles[rows, :k] = poles
-        error = None if entry_error is None else entry_error[rows][:, kept][:, :, kept]
+        error = None if entry_error is None else entry_error(rows)
+        if error is not None and not whole:
+            error = error[:, kept][:, :, kept]
         distance = np.abs(1 - np.abs(poles)) if dt > 0 else None
         found.radius[rows, :k] = pole_radii(
             part, poles, right, left, entry_error=error, distance=distance
@@ -211,7 +217,7 @@ def _find_descriptor(
     A: Floats,
     E: Floats,
     usable: NDArray[np.bool_],
-    entry_error: Floats | None,
+    entry_error: ErrorsOf | None,
     mass_error: Floats | None,
 ) -> None:
     """Enter the modes of descriptor models."""
@@ -223,7 +229,7 @@ def _find_descriptor(
     modes = descriptor_modes(
         A[rows],
         E[rows],
-        entry_error=None if entry_error is None else entry_error[rows],
+        entry_error=None if entry_error is None else entry_error(rows),
         mass_error=None if mass_error is None else mass_error[rows],
     )
     found.poles[rows], found.radius[rows] = modes.poles, modes.radii
