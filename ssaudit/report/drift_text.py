@@ -49,7 +49,7 @@ def drift_text(comparison: Comparison, most: int | None = None) -> RenderableTyp
             parts += [Text(), *_points(f"{change} ({len(rows)})", rows, units, most)]
     movers = found.movers(most)
     if len(movers):
-        parts += [Text(), *_points("largest movers", movers, units, most)]
+        parts += [Text(), *_points("moved most", movers, units, most)]
     runs = [
         [name, f"{run.run}, revision {run.revision}"]
         for name, run in (("from", before), ("to", after))
@@ -88,19 +88,19 @@ def _movement(comparison: Comparison) -> list[Text]:
 
 def _points(title: str, rows: Any, units: Any, most: int) -> list[Text]:
     names = [name[3:] for name in rows if name.startswith("at_")]
-    place = ", ".join(f"{name} {units.get(name, '')}".rstrip() for name in names)
-    headings = [title, "verdict", "max_real 1/s", "min_damping", f"at {place}" if place else ""]
+    places = [f"{name}\n{units.get(name, '')}".rstrip() for name in names]
+    headings = [title, "verdict", "max_real 1/s", "min_damping", *places]
     cells = [
         [
             shortened(row["point"]),
             _arrow(_word(row["verdict_from"]), _word(row["verdict_to"])),
             _arrow(number(row["max_real_from"], 3), number(row["max_real_to"], 3)),
             _arrow(number(row["min_damping_from"], 3), number(row["min_damping_to"], 3)),
-            ", ".join(f"{row['at_' + name]:g}" for name in names),
+            *(f"{row['at_' + name]:g}" for name in names),
         ]
         for row in rows.head(most).to_dict("records")
     ]
-    lines = aligned(headings, "llrrl", cells)
+    lines = aligned(headings, "llrr" + "r" * len(names), cells)
     rest = len(rows) - most
     return [*lines, one_line(f"and {rest} more: --json", "dim")] if rest > 0 else lines
 

@@ -42,7 +42,6 @@ def point_text(report: PointReport) -> RenderableType:
     judged = Text.assemble(verdict(row["verdict"]), printable(f"  {row['reason']}".rstrip()))
     if row["verdict"] == "ok" and not report.judged:
         judged = Text("stable, and judged by no requirement: --criteria")
-    judged.no_wrap, judged.overflow = True, "ellipsis"
     parts: list[RenderableType] = [title, judged]
     if any(report.apart.values()):
         apart = ", ".join(f"{name} {gap:+g}" for name, gap in report.apart.items())
@@ -64,11 +63,13 @@ def _first(report: PointReport) -> list[Text]:
     lines = []
     if not math.isnan(gain) and math.isfinite(gain):
         text = f"first lost by gain: {number(gain, 3)} dB at {row['gain_margin_db_loop']}"
-        lines.append(one_line(f"{text}, {number(row['gain_margin_db_frequency'], 3)} rad/s"))
+        at = number(row["gain_margin_db_frequency"], 3)
+        lines.append(Text(printable(f"{text}, {at} rad/s")))
     if not math.isnan(phase) and math.isfinite(phase):
         margins = f"{number(phase, 3)} deg or {number(row['delay_margin_s'], 3)} s of delay"
         text = f"first lost by phase: {margins} at {row['phase_margin_deg_loop']}"
-        lines.append(one_line(f"{text}, {number(row['phase_margin_deg_frequency'], 3)} rad/s"))
+        at = number(row["phase_margin_deg_frequency"], 3)
+        lines.append(Text(printable(f"{text}, {at} rad/s")))
     return lines
 
 
@@ -108,7 +109,8 @@ def _loops(report: PointReport) -> list[Text]:
                 number(float(loop.peaks.sensitivity_frequency[0]), 3),
             ]
         )
-    headings = ["loops", "down dB", "up dB", "phase deg", "rad/s", "delay s", "peak S", "rad/s"]
+    headings = ["loops", "down\ndB", "up\ndB", "phase\ndeg", "at\nrad/s", "delay\ns", "peak\nS"]
+    headings.append("at\nrad/s")
     return aligned(headings, "lrrrrrrr", rows)
 
 

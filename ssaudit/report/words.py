@@ -109,7 +109,7 @@ def aligned(
     Parameters
     ----------
     headings : sequence of str
-        One a column.
+        One a column; "name\\nunit" stands in two lines.
     sides : str
         "l" or "r" for each column; what does not fit the screen is cut off at the right.
     rows : sequence of rows
@@ -125,10 +125,15 @@ def aligned(
     --------
     >>> [line.plain for line in aligned(["state", "share"], "lr", [["pitch", "0.61"]])]
     ['state  share', 'pitch   0.61']
+    >>> [line.plain for line in aligned(["loop", "up\\ndB"], "lr", [["pitch", "6.88"]])]
+    ['         up', 'loop     dB', 'pitch  6.88']
     """
-    head = [Text(printable(heading), style="dim") for heading in headings]
+    heads = [heading.split("\n") for heading in headings]
+    depth = max(len(head) for head in heads)
+    heads = [[""] * (depth - len(head)) + head for head in heads]
+    head = [[Text(printable(lines[i]), style="dim") for lines in heads] for i in range(depth)]
     cells = [[c if isinstance(c, Text) else Text(printable(c)) for c in row] for row in rows]
-    table = [head, *cells]
+    table = [*head, *cells]
     widths = [max(row[i].cell_len for row in table) for i in range(len(headings))]
     return [_line(row, widths, sides, indent) for row in table]
 
