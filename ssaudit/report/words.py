@@ -104,12 +104,12 @@ def counts(points: Mapping[str, int]) -> Text:
 def aligned(
     headings: Sequence[str], sides: str, rows: Sequence[Sequence[str | Text]], indent: str = ""
 ) -> list[Text]:
-    """Lay out a table as lines: a dim heading, then a line a row, columns aligned.
+    r"""Lay out a table as lines: a dim heading, then a line a row, columns aligned.
 
     Parameters
     ----------
     headings : sequence of str
-        One a column; "name\\nunit" stands in two lines.
+        One a column; "name\nunit" stands in two lines.
     sides : str
         "l" or "r" for each column; what does not fit the screen is cut off at the right.
     rows : sequence of rows
@@ -125,7 +125,7 @@ def aligned(
     --------
     >>> [line.plain for line in aligned(["state", "share"], "lr", [["pitch", "0.61"]])]
     ['state  share', 'pitch   0.61']
-    >>> [line.plain for line in aligned(["loop", "up\\ndB"], "lr", [["pitch", "6.88"]])]
+    >>> [line.plain for line in aligned(["loop", "up\ndB"], "lr", [["pitch", "6.88"]])]
     ['         up', 'loop     dB', 'pitch  6.88']
     """
     heads = [heading.split("\n") for heading in headings]

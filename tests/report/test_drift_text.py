@@ -48,7 +48,7 @@ def section(shown, title):
 def test_nothing_changed(compared):
     shown = lines(drift_text(compared([0.5, 0.1], [0.5, 0.1])))
     assert shown[1] == "0 worse   0 appeared   0 vanished   0 better   2 same verdict"
-    assert not [line for line in shown if line.startswith(("worse", "largest movers"))]
+    assert not [line for line in shown if line.startswith(("worse", "moved most"))]
     assert " ".join(shown).split()[-len(CAUTION_WORDS) :] == CAUTION_WORDS
 
 
@@ -85,7 +85,7 @@ def test_lists_are_cut_and_say_so(compared):
     worse = section(shown, "worse (30)")
     assert [line.split()[0] for line in worse[:4]] == ["p29", "p28", "p27", "p26"]
     assert worse[4] == "and 26 more: --json"
-    assert len(section(shown, "largest movers")) == 4
+    assert len(section(shown, "moved most")) == 4
 
 
 def test_points_that_appear_and_vanish(compared):
