@@ -436,12 +436,13 @@ def damping_ratio_radius(s: Complexes, radius: ArrayLike) -> tuple[Floats, Float
     """
     size, radius = np.abs(s), np.asarray(radius, dtype=float)
     with np.errstate(divide="ignore", invalid="ignore"):
-        ratio = radius / size
-    inside = ratio < 1.0
-    half = np.arcsin(np.where(inside, ratio, 0.0))
-    angle = np.abs(np.angle(s))
-    low = -np.cos(np.maximum(angle - half, 0.0))
-    high = -np.cos(np.minimum(angle + half, np.pi))
+        sine = radius / size
+        inside = sine < 1.0
+        across, along = np.abs(s.imag) / size, -s.real / size
+        cosine = np.sqrt((1.0 - sine) * (1.0 + sine))
+        # Addition theorem for the two ends; a disk across the real axis holds a whole end, 1 or -1.
+        low = np.where((across < sine) & (along < 0), -1.0, along * cosine - across * sine)
+        high = np.where((across < sine) & (along > 0), 1.0, along * cosine + across * sine)
     return np.where(inside, low, -1.0), np.where(inside, high, 1.0)
 
 
