@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.bank import Matrices, Points, Section
-from ssaudit.columns import Columns, loop_columns, mode_columns, point_columns
+from ssaudit.columns import Columns, Words, loop_columns, mode_columns, point_columns
 from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
 from ssaudit.loop.closing import ClosedModels
@@ -93,7 +93,10 @@ def named_rows(part: Part, table: Columns) -> Columns:
     -------
     dict of arrays
     """
-    columns = dict(table)
+    columns = {
+        name: column.column if isinstance(column, Words) else column
+        for name, column in table.items()
+    }
     row = columns.pop("row")
     of_point = {name: part.points[name][row] for name in ("point", "revision")}
     return {**of_point, **columns}

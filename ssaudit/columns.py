@@ -1,6 +1,7 @@
 """Columns of the points and the modes table, as they stand in the ledger."""
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -22,12 +23,43 @@ from ssaudit.modes.stacked import Modes
 if TYPE_CHECKING:
     from ssaudit.distances import Distances
 
-Columns = dict[str, NDArray[Any]]
+
+@dataclass(frozen=True, eq=False)
+class Words:
+    """A column of few different words.
+
+    Attributes
+    ----------
+    which : (rows,) int
+        Which of the words each row has.
+    words : (words,) object
+        The words, as str.
+    """
+
+    which: NDArray[np.int64]
+    words: NDArray[np.object_]
+
+    @property
+    def column(self) -> NDArray[np.object_]:
+        """A word a row."""
+        return np.asarray(self.words[self.which], dtype=object)
+
+
+Columns = dict[str, Any]
+"""Table column by column: arrays, and `Words` where a table has very many rows."""
 
 
 def concatenated(parts: Sequence[Columns]) -> Columns:
     """Join tables of the same columns, one below the other; there is at least one."""
-    return {name: np.concatenate([part[name] for part in parts]) for name in parts[0]}
+    return {name: _joined([part[name] for part in parts]) for name in parts[0]}
+
+
+def _joined(columns: Sequence[Any]) -> Any:
+    if not isinstance(columns[0], Words):
+        return np.concatenate(columns)
+    starts = np.cumsum([0, *(len(column.words) for column in columns[:-1])])
+    which = [column.which + start for column, start in zip(columns, starts, strict=True)]
+    return Words(np.concatenate(which), np.concatenate([column.words for column in columns]))
 
 
 def point_columns(
@@ -77,7 +109,7 @@ def point_columns(
             columns["radius"] = np.where(judged, modes.radius[rows, judgement.worst], np.nan)
         else:
             columns["radius"] = np.full(count, np.nan)
-        columns["top_states"] = state_names(top, closed.states)
+        columns["top_states"] = Words(*state_names(top, closed.states)).column
         columns |= {f"participation_{i + 1}": share[:, i] for i in range(TOP)}
     return columns
 
@@ -112,13 +144,13 @@ def mode_columns(closed: ClosedModels, modes: Modes) -> Columns:
         "damping_ratio": damping_ratio(s),
         "time_constant": time_constant(s),
         "modulus": np.full(len(s), np.nan) if modes.z is None else np.abs(modes.z[keep]),
-        "note": np.full(len(s), "", dtype=object)
+        "note": Words(np.zeros(len(s), dtype=np.int64), np.array([""], dtype=object))
         if modes.z is None
-        else sampled_notes(modes.z[keep]),
+        else Words(np.arange(len(s)), sampled_notes(modes.z[keep])),
     }
     if modes.index is not None:
         columns["radius"] = modes.radius[keep]
-        columns["top_states"] = state_names(modes.index[keep], closed.states)
+        columns["top_states"] = Words(*state_names(modes.index[keep], closed.states))
     return columns
 
 

@@ -14,7 +14,7 @@ import numpy as np
 
 from ssaudit.arrow import arrow_array
 from ssaudit.chunk import Part
-from ssaudit.columns import concatenated
+from ssaudit.columns import Words, concatenated
 from ssaudit.criteria import POINT_QUANTITIES
 from ssaudit.errors import LedgerError
 from ssaudit.ledger import FOLDER, SCHEMA, LoggedRun, find_logged
@@ -112,7 +112,7 @@ class RunWriter:
             if tables:
                 columns = concatenated(tables)
                 row = columns.pop("row")
-                of_point = {key: (row, points[key]) for key in ("point", "revision")}
+                of_point = {key: Words(row, points[key]) for key in ("point", "revision")}
                 self._write(name, {**of_point, **columns})
 
     def _write(self, name: str, columns: Mapping[str, Any]) -> None:
@@ -184,10 +184,8 @@ class RunWriter:
 
 
 def _arrow(column: Any) -> Any:
-    """One column for Arrow; a pair is words, and which of them each row has."""
-    if isinstance(column, tuple):
-        row, words = column
-        return arrow_array(words).take(arrow_array(row))
+    if isinstance(column, Words):
+        return arrow_array(column.words).take(arrow_array(column.which))
     return arrow_array(column)
 
 

@@ -112,7 +112,9 @@ def top_states(
     return index, share
 
 
-def state_names(index: NDArray[np.int64], states: Sequence[str]) -> NDArray[np.object_]:
+def state_names(
+    index: NDArray[np.int64], states: Sequence[str]
+) -> tuple[NDArray[np.int64], NDArray[np.object_]]:
     """Write the names of the top states of each mode, in order.
 
     Parameters
@@ -124,12 +126,15 @@ def state_names(index: NDArray[np.int64], states: Sequence[str]) -> NDArray[np.o
 
     Returns
     -------
-    (modes,) object
-        Such as "pitch, heave"; "" where none is known.
+    which : (modes,) int
+        Which of the texts each mode has.
+    texts : (texts,) object
+        Each text once, such as "pitch, heave"; "" where none is known.
 
     Examples
     --------
-    >>> state_names(np.array([[1, 0], [0, -1]]), ["heave", "pitch"])
+    >>> which, texts = state_names(np.array([[1, 0], [0, -1]]), ["heave", "pitch"])
+    >>> texts[which]
     array(['pitch, heave', 'heave'], dtype=object)
     """
     base = len(states) + 1
@@ -141,4 +146,4 @@ def state_names(index: NDArray[np.int64], states: Sequence[str]) -> NDArray[np.o
     # A name that holds the separator itself would read as two.
     plain = [name.replace(", ", ",") for name in states]
     texts[:] = [", ".join([plain[i] for i in row if i >= 0]) for row in index[first].tolist()]
-    return np.asarray(texts[inverse], dtype=object)
+    return inverse, texts

@@ -6,12 +6,13 @@ computed pole (`pole_radii`), and that a range of damping ratios (`damping_ratio
 """
 
 from collections.abc import Mapping
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from ssaudit.modes.clusters import balance_scaling, cluster_radii, gather_components
+from ssaudit.modes.pairs import PairedModes, equally_paired, inverse_defect, pair_modes
 from ssaudit.modes.poles import isolate
 
 Floats = NDArray[np.float64]
@@ -231,50 +232,83 @@ def pole_radii(
     """
     points, states = poles.shape
     radii = np.full((points, states), np.inf)
-    if radii.size == 0:
-        return radii
-    error = None if entry_error is None else np.asarray(entry_error, dtype=float)
-    if error is not None:
-        error = np.broadcast_to(error, A.shape)
-    if distance is None:
-        distance = np.abs(poles.real)
-    step = max(1, SLICE_ENTRIES // states**2)
-    for start in range(0, points, step):
-        part = slice(start, start + step)
-        E = None if error is None else error[part]
-        with np.errstate(all="ignore"):
-            radii[part] = _slice_radii(
-                A[part], poles[part], right[part], left[part], E, distance[part]
+    step = max(1, SLICE_ENTRIES // max(1, states) ** 2)
+    for rows, _ in equally_paired(poles):
+        for start in range(0, len(rows), step):
+            part = rows[start : start + step]
+            radii[part] = paired_radii(
+                A[part],
+                pair_modes(poles[part], right[part], left[part]),
+                None if entry_error is None else np.broadcast_to(entry_error, A.shape)[part],
+                None if distance is None else distance[part],
             )
     return radii
 
 
-def _slice_radii(
-    A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None, distance: Floats
+def paired_radii(
+    A: Floats, modes: PairedModes, entry_error: Floats | None, distance: Floats | None = None
 ) -> Floats:
-    """Radii (points, n) of a stack small enough for the cache.
+    """`pole_radii` of a stack of few points, of which each conjugate pair is known once.
 
-    The bound and the gaps have the points last: sums and extremes over a few rows or columns then
-    run along the points, several times faster.
+    Parameters
+    ----------
+    A, entry_error, distance
+        As for `pole_radii`, of no more points than the processor's cache holds.
+    modes : PairedModes
+        From `ssaudit.modes.pairs`.
+
+    Returns
+    -------
+    (points, n) float
+
+    Examples
+    --------
+    >>> from ssaudit.modes.poles import find_modes
+    >>> A = np.array([[[-1.0, 2.0], [-2.0, -1.0]]])
+    >>> paired_radii(A, pair_modes(*find_modes(A)[:3]), np.full(A.shape, 0.001)).round(4)
+    array([[0.002, 0.002]])
     """
-    F = _coupling_bound(A, poles, V, W, E)
-    across = np.ascontiguousarray(poles.T)
-    gap = np.abs(across[:, None] - across[None, :])
-    np.einsum("iip->ip", gap)[:] = np.inf
-    radii, isolated = _disk_radii(F, gap, poles)
-    again = np.flatnonzero((~(radii < distance)).any(axis=1) & np.isfinite(F).all(axis=(0, 1)))
-    if again.size:
-        even = even_rows(np.moveaxis(F[..., again], -1, 0))
-        even, apart = _disk_radii(np.moveaxis(even, 0, -1), gap[..., again], poles[again])
-        better = _smaller(even, radii[again])
-        radii[again[better]], isolated[again[better]] = even[better], apart[better]
-    reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
-    scales = balance_scaling(A[reaching]) if reaching.any() else ()
-    for i, scale in zip(np.flatnonzero(reaching), scales, strict=True):
-        tighter = cluster_radii(A[i], poles[i], None if E is None else E[i], scale)
-        if _smaller(tighter, radii[i]):
-            radii[i] = tighter
+    poles, E = modes.poles, entry_error
+    if poles.size == 0:
+        return np.full(poles.shape, np.inf)
+    if distance is None:
+        distance = np.abs(poles.real)
+    with np.errstate(all="ignore"):
+        F = _coupling_bound(A, modes.kept, modes.right, np.abs(modes.left), modes.defect, E)
+        disks = _isolated_radii(F, _kept_gaps(modes), modes.stands_for.T)
+        radii, isolated, rows = (modes.each(values.T) for values in disks)
+        _share_groups(radii, isolated, rows, poles)
+        again = np.flatnonzero((~(radii < distance)).any(axis=1) & np.isfinite(F).all(axis=(0, 1)))
+        if again.size:
+            whole = _of_all_modes(F[..., again], modes.back[again])
+            even, apart = _disk_radii(even_rows(whole), poles[again])
+            better = _smaller(even, radii[again])
+            radii[again[better]], isolated[again[better]] = even[better], apart[better]
+        reaching = (~isolated & ~(radii < distance)).any(axis=1) & np.isfinite(poles).all(axis=1)
+        scales = balance_scaling(A[reaching]) if reaching.any() else ()
+        for i, scale in zip(np.flatnonzero(reaching), scales, strict=True):
+            tighter = cluster_radii(A[i], poles[i], None if E is None else E[i], scale)
+            if _smaller(tighter, radii[i]):
+                radii[i] = tighter
     return radii
+
+
+def _kept_gaps(modes: PairedModes) -> Floats:
+    """Distances of the kept poles from each other, and of each from its own conjugate.
+
+    That of another pair is further away than the other pair's first pole. (kept, kept, points).
+    """
+    kept = np.ascontiguousarray(modes.kept.T)
+    gap = np.abs(kept[:, None] - kept[None, :])
+    conjugate = np.where(modes.stands_for.T == 1, np.inf, 2.0 * np.abs(kept.imag))
+    np.einsum("iip->ip", gap)[:] = conjugate
+    return gap
+
+
+def _of_all_modes(F: Floats, back: NDArray[np.int64]) -> Floats:
+    """From (kept, kept, points), where a pair has the same rows and columns, to (points, n, n)."""
+    points = np.arange(len(back))[:, None, None]
+    return np.asarray(np.moveaxis(F, -1, 0)[points, back[:, :, None], back[:, None, :]])
 
 
 def _smaller(radii: Floats, others: Floats) -> NDArray[np.bool_]:
@@ -319,21 +353,30 @@ def even_rows(F: Floats) -> Floats:
     return np.asarray(F * np.swapaxes(vector, 1, 2) / vector * (1.0 + 8 * EPS))
 
 
-def _disk_radii(F: Floats, gap: Floats, poles: Complexes) -> tuple[Floats, NDArray[np.bool_]]:
+def _disk_radii(F: Floats, poles: Complexes) -> tuple[Floats, NDArray[np.bool_]]:
     """Radii of Gershgorin's disks, shared in overlapping groups, and which disks stand alone.
 
-    F and the gaps are (n, n, points), all else (points, n).
+    F is (points, n, n) and of all modes; the results are (points, n).
     """
-    radii, isolated = _isolated_radii(F, gap)
-    radii, isolated = radii.T.copy(), isolated.T.copy()
+    gap = np.abs(poles[:, :, None] - poles[:, None, :])
+    np.einsum("pii->pi", gap)[:] = np.inf
+    F, gap = np.moveaxis(F, 0, -1), np.moveaxis(gap, 0, -1)
+    found, free, rows = _isolated_radii(F, gap, np.ones(poles.T.shape))
+    radii, isolated = found.T.copy(), free.T.copy()
+    _share_groups(radii, isolated, rows.T, poles)
+    return radii, isolated
+
+
+def _share_groups(
+    radii: Floats, isolated: NDArray[np.bool_], rows: Floats, poles: Complexes
+) -> None:
+    """Enter the radii of disks that overlap: a true pole may be anywhere in their union."""
     loose = np.flatnonzero(~isolated.all(axis=1))
     if loose.size:
-        plain = F[..., loose].sum(axis=1).T
-        gaps = np.moveaxis(gap[..., loose], -1, 0)
-        grouped = gather_components(poles[loose], poles[loose], plain, gaps)
+        gap = np.abs(poles[loose, :, None] - poles[loose, None, :])
+        grouped = gather_components(poles[loose], poles[loose], rows[loose], gap)
         radii[loose] = np.where(isolated[loose], radii[loose], grouped)
     radii[np.isnan(radii)] = np.inf
-    return radii, isolated
 
 
 def coupling_bound(
@@ -361,18 +404,22 @@ def coupling_bound(
     >>> coupling_bound(-one, np.array([[-1.0 + 0j]]), one + 0j, one + 0j, 0.1 * one).round(6)
     array([[[0.1]]])
     """
-    return np.moveaxis(_coupling_bound(A, poles, V, W, E), -1, 0)
+    size = np.abs(W)
+    return np.moveaxis(_coupling_bound(A, poles, V, size, inverse_defect(W, V), E), -1, 0)
 
 
 def _coupling_bound(
-    A: Floats, poles: Complexes, V: Complexes, W: Complexes, E: Floats | None
+    A: Floats, poles: Complexes, V: Complexes, left_size: Floats, defect: Floats, E: Floats | None
 ) -> Floats:
-    """`coupling_bound` as (n, n, points)."""
-    points, n = poles.shape
-    gamma, ones = (n + 4) * EPS, np.ones((n, 1))
+    """`coupling_bound` of the modes that are given, (modes, modes, points).
+
+    Sums and extremes over a few modes run along the points then, which is several times faster.
+    """
+    points, n, modes = V.shape
+    gamma = (n + 4) * EPS
     size = np.abs(V)
     # A is real: a real product of twice the columns costs half of a complex one.
-    residual = (A @ V.view(float).reshape(points, n, 2 * n)).view(complex)
+    residual = (A @ V.view(float).reshape(points, n, 2 * modes)).view(complex)
     residual -= V * poles[:, None, :]
     known = gamma * np.abs(A)
     if E is not None:
@@ -380,35 +427,32 @@ def _coupling_bound(
     outer = np.abs(residual)
     outer += known @ size
     outer += (gamma * np.abs(poles))[:, None, :] * size
-    left_size = np.abs(W)
     F = np.ascontiguousarray((left_size @ outer).transpose(1, 2, 0))
-    product = W @ V
-    np.einsum("pii->pi", product)[:] -= 1.0
-    # Sums over a row, as products with ones, which are several times faster.
-    defect = (np.abs(product) @ ones + gamma * (left_size @ (size @ ones)))[..., 0].T
-    worst = defect.max(axis=0)
+    worst = defect.max(axis=1)
     factor = np.where(worst <= MAX_INVERSE_DEFECT, 1.0 / (1.0 - worst), np.inf)
-    F += (defect * factor)[:, None, :] * F.max(axis=0)
+    F += (defect * factor[:, None]).T[:, None, :] * F.max(axis=0)
     # The bound's own sums are rounded too; all terms are positive, so a relative margin does.
     F *= 1.0 + 8 * gamma
     return F
 
 
-def _isolated_radii(F: Floats, gap: Floats) -> tuple[Floats, NDArray[np.bool_]]:
+def _isolated_radii(
+    F: Floats, gap: Floats, stands_for: NDArray[Any]
+) -> tuple[Floats, NDArray[np.bool_], Floats]:
     """Gershgorin radii after scaling row i by the smallest factor that frees disk i of the others.
 
     Scaling row i by a and column i by 1/a leaves the poles. With a = max_j 2 F_ji / gap_ij, F_ji/a
     takes at most half of each gap; the disk is free if the rest fits into the other half. F and the
-    gaps are (n, n, points), the results (n, points).
+    gaps are (modes, modes, points); radii, which are free, and sums of whole rows (modes, points).
     """
     n = len(F)
     diagonal = np.einsum("iip->ip", F)
-    rows = F.sum(axis=1)
+    rows = (F * stands_for).sum(axis=1)
     scale = (2.0 * F / gap).max(axis=0)
     radii = diagonal + np.minimum(scale, 1.0) * (rows - diagonal)
-    radii *= 1.0 + 8 * n * EPS
-    room = (0.5 * gap - rows[None]).min(axis=1)
-    return radii, radii < room
+    radii *= 1.0 + 16 * n * EPS
+    room = (0.5 * gap - rows).min(axis=1)
+    return radii, radii < room, rows
 
 
 def damping_ratio_radius(s: Complexes, radius: ArrayLike) -> tuple[Floats, Floats]:

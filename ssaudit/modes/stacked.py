@@ -7,10 +7,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.modes.neutral import neutral_states
+from ssaudit.modes.pairs import add_left_vectors, equally_paired, find_vectors
 from ssaudit.modes.participation import TOP, participation_of_modes, top_states
-from ssaudit.modes.poles import find_modes, find_poles
+from ssaudit.modes.poles import find_poles
 from ssaudit.modes.quantities import continuous_poles
-from ssaudit.modes.radii import SLICE_ENTRIES, continuous_radius, pole_radii
+from ssaudit.modes.radii import SLICE_ENTRIES, continuous_radius, paired_radii
 
 Floats = NDArray[np.float64]
 ErrorsOf = Callable[[NDArray[np.int64]], Floats | None]
@@ -128,10 +129,7 @@ def find_usable_modes(
     else:
         left_out = neutral_states(A, np.array(neutral, dtype=np.int64), dt > 0)
         for rows, kept in _alike(left_out, usable):
-            # Vectors of a few points at a time stay in the processor's cache until they are used.
-            step = max(1, SLICE_ENTRIES // max(1, len(kept)) ** 2)
-            for start in range(0, len(rows), step):
-                _find_alike(found, A, rows[start : start + step], kept, entry_error, dt)
+            _find_alike(found, A, rows, kept, entry_error, dt)
     failed = found.unsolved != ""
     poles, radius = found.poles, found.radius
     rest = (found.index, found.share, found.infinite if E is not None else None, found.unsolved)
@@ -165,22 +163,16 @@ class _Found:
 
     def add_participation(
         self,
-        rows: NDArray[np.int64],
+        at: tuple[NDArray[np.int64], NDArray[np.int64]],
         kept: NDArray[np.int64],
-        poles: NDArray[np.complex128],
-        right: NDArray[np.complex128],
-        left: NDArray[np.complex128],
+        factors: Floats,
     ) -> None:
-        """Enter which states take part most in the modes of some points."""
+        """Enter which of the states kept take part most in some modes, at (rows, places)."""
         if self.index is None or self.share is None:
             return
-        # Both modes of a conjugate pair have the same participation; the first one is enough.
-        first = poles.imag >= 0
-        factors = participation_of_modes(np.swapaxes(right, 1, 2)[first], left[first])
-        top, shares = top_states(factors)
-        point, mode = np.nonzero(first)
-        self.index[rows[point], mode] = np.where(top >= 0, kept[top], -1)
-        self.share[rows[point], mode] = shares
+        top, share = top_states(factors.reshape(at[0].size, len(kept)))
+        self.index[at] = np.where(top >= 0, kept[top], -1).reshape(*at[0].shape, TOP)
+        self.share[at] = share.reshape(*at[0].shape, TOP)
 
 
 def _find_alike(
@@ -192,24 +184,38 @@ def _find_alike(
     dt: float,
 ) -> None:
     """Enter the modes of ordinary models that keep the same states."""
-    k, whole = len(kept), len(kept) == A.shape[1]
-    part = A[rows] if whole else A[rows][:, kept][:, :, kept]
+    k = len(kept)
+    part = _of_states(A[rows], kept)
     if found.index is None:
         found.poles[rows, :k], failed = find_poles(part)
         largest = np.abs(part).max(axis=(1, 2), initial=0.0)
         found.radius[rows, :k] = np.finfo(float).eps * largest[:, np.newaxis]
     else:
-        poles, right, left, failed = find_modes(part)
+        poles, right, failed = find_vectors(part)
         found.poles[rows, :k] = poles
-        error = None if entry_error is None else entry_error(rows)
-        if error is not None and not whole:
-            error = error[:, kept][:, :, kept]
-        distance = np.abs(1 - np.abs(poles)) if dt > 0 else None
-        found.radius[rows, :k] = pole_radii(
-            part, poles, right, left, entry_error=error, distance=distance
-        )
-        found.add_participation(rows, kept, poles, right, left)
+        for some in _handfuls(poles):
+            modes = add_left_vectors(poles[some], right[some])
+            error = None if entry_error is None else entry_error(rows[some])
+            error = None if error is None else _of_states(error, kept)
+            distance = np.abs(1 - np.abs(modes.poles)) if dt > 0 else None
+            found.radius[rows[some], :k] = paired_radii(part[some], modes, error, distance)
+            at = np.broadcast_arrays(rows[some][:, np.newaxis], modes.place)
+            factors = participation_of_modes(np.swapaxes(modes.right, 1, 2), modes.left)
+            found.add_participation((at[0], at[1]), kept, factors)
     found.unsolved[rows[failed]] = NOT_CONVERGED
+
+
+def _handfuls(poles: NDArray[np.complex128]) -> Iterator[NDArray[np.int64]]:
+    """Points with equally many pairs, as many at a time as the processor's cache holds."""
+    for alike, kept in equally_paired(poles):
+        step = max(1, SLICE_ENTRIES // max(1, kept * poles.shape[1]))
+        for start in range(0, len(alike), step):
+            yield alike[start : start + step]
+
+
+def _of_states(M: Floats, kept: NDArray[np.int64]) -> Floats:
+    """Leave the rows and columns of the other states out."""
+    return M if len(kept) == M.shape[1] else M[:, kept][:, :, kept]
 
 
 def _find_descriptor(
@@ -235,7 +241,11 @@ def _find_descriptor(
     found.poles[rows], found.radius[rows] = modes.poles, modes.radii
     found.infinite[rows] = modes.infinite
     found.unsolved[rows] = [REASONS.get(str(reason), "") for reason in modes.reason]
-    found.add_participation(rows, np.arange(A.shape[1]), modes.poles, modes.right, modes.left)
+    # Both modes of a pair have the same participation; the first one is enough.
+    first = modes.poles.imag >= 0
+    point, place = np.nonzero(first)
+    factors = participation_of_modes(np.swapaxes(modes.right, 1, 2)[first], modes.left[first])
+    found.add_participation((rows[point], place), np.arange(A.shape[1]), factors)
 
 
 def _alike(
