@@ -150,14 +150,14 @@ class TestWhatDoubtCountsAs:
 
 def off_by(monkeypatch, error):
     """Make the eigenvalue solver wrong by some error or to some poles."""
-    genuine = stacked.find_modes
+    genuine = stacked.find_vectors
 
     def wrong(A):
-        poles, right, left, failed = genuine(A)
+        poles, right, failed = genuine(A)
         changed = poles + error if np.isscalar(error) else np.array([error] * len(A), dtype=complex)
-        return changed, right, left, failed
+        return changed, right, failed
 
-    monkeypatch.setattr(stacked, "find_modes", wrong)
+    monkeypatch.setattr(stacked, "find_vectors", wrong)
 
 
 class TestCrossChecks:
@@ -178,7 +178,7 @@ class TestCrossChecks:
     def test_coefficients(self, monkeypatch):
         A = np.array([[0.0, 1.0], [-2.0, -3.0]])  # poles -1 and -2
         monkeypatch.setattr(
-            stacked, "pole_radii", lambda A, poles, *_, **about: np.full(poles.shape, 1e-15)
+            stacked, "paired_radii", lambda A, modes, *_: np.full(modes.poles.shape, 1e-15)
         )
         assert row(A)["verdict"] == "ok"
         off_by(monkeypatch, [1.0, -4.0])  # of the right sum, on both sides of the axis

@@ -45,7 +45,7 @@ def balance_loop(loop: StateSpace) -> StateSpace:
     return StateSpace(A, loop.B / scale[:, :, None], loop.C * scale[:, None, :], loop.D)
 
 
-def balance_states(A: Real) -> Real:
+def balance_states(A: Real, sweeps: int = EXACT_SWEEPS) -> Real:
     """Scalings of the states that make rows and columns of A equal in size.
 
     Unrounded, so that the balanced matrix is the same in whatever units and order the states
@@ -55,6 +55,8 @@ def balance_states(A: Real) -> Real:
     ----------
     A : (points, n, n) float
         State matrices.
+    sweeps : int
+        Most half steps to take.
 
     Returns
     -------
@@ -72,7 +74,35 @@ def balance_states(A: Real) -> Real:
     100.0
     """
     nothing = np.zeros(A.shape[:2])
-    return np.asarray(np.exp2(_find_exponents(A, nothing, nothing, EXACT_SWEEPS)))
+    return np.asarray(np.exp2(_find_exponents(A, nothing, nothing, sweeps)))
+
+
+def resolvent_of(A: Real) -> StateSpace:
+    """Write (sI - A)⁻¹ as a system with balanced states, not even rounded.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        State matrices.
+
+    Returns
+    -------
+    StateSpace
+        With as many inputs and outputs as states.
+
+    Examples
+    --------
+    >>> G = resolvent_of(np.array([[[-1.0, 64.0], [1.0, -1.0]]]))
+    >>> G.A[0]
+    array([[-1.,  4.],
+           [16., -1.]])
+    """
+    nothing = np.zeros(A.shape[:2])
+    scale = np.exp2(np.round(_find_exponents(A, nothing, nothing, ROUNDED_SWEEPS)))
+    identity = np.eye(A.shape[-1])
+    balanced = A * scale[:, None, :] / scale[:, :, None]
+    B, C = identity / scale[:, :, None], identity * scale[:, None, :]
+    return StateSpace(balanced, B, C, np.zeros(A.shape))
 
 
 def _find_exponents(A: Real, drive: Real, read: Real, sweeps: int) -> Real:

@@ -8,46 +8,72 @@ zeros of real rational functions of x = -ω² whose poles are the eigenvalues of
 
 The poles of T are away from the axis, so that integrators of L do no harm, and the eigenproblem
 has the size of the model: half that of the Hamiltonian.
+
+Between neighbouring zeros a function has one sign, so that it rises and falls through them in turn.
+Where the zeros found do not alternate, or poles spread over many decades (the slow ones are then at
+the mercy of rounding), the eigenproblem is solved anew with a shift for every band of frequencies,
+signs are looked at on both sides of every resonance, and what still does not alternate has failed.
 """
+
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.margins.peak_search import near_axis
-from ssaudit.margins.stability_radius import join
+from ssaudit.margins.crossing_accuracy import on_axis, response_error
+from ssaudit.margins.crossing_candidates import solve_banded, solve_squared
+from ssaudit.margins.crossing_signs import (
+    do_alternate,
+    find_hidden,
+    find_missed,
+    look_along,
+    signs_at_ends,
+    signs_at_limits,
+)
 from ssaudit.margins.state_space import (
     Bool,
     Complex,
     Index,
     Real,
     StateSpace,
-    invert,
-    respond,
     respond_with_slope,
-    typical_frequency,
 )
-from ssaudit.modes.poles import find_poles
 
-# Shifts tried, as multiples of the square of the typical frequency; irregular on purpose.
-SHIFTS = np.array([0.317, 1.733, 7.29, 0.0531, 41.7])
-# Where the function is this much smaller at a shift than its terms, the next shift is tried.
-SMALL_AT_SHIFT = 1e-8
-# Squaring A loses what is this much slower than the fastest pole; then s itself is solved for.
+# Squaring A loses what is this much slower than the fastest pole; then bands are solved one by one.
 WIDEST_SQUARED = 1e4
-# Smaller than this it is rounding.
-ZERO_THROUGHOUT = 1e-15
-# An eigenvalue x this far from the negative real axis, relative, is still tried as a crossing.
-NEAR_REAL = 1e-4
 NEWTON_STEPS = 5
-# Where each resonance is looked at, in half widths from its frequency.
-ABOVE = np.geomspace(0.1, 1e4, 11)
-FLANKS = np.concatenate([-ABOVE[::-1], [0.0], ABOVE])
-BISECTIONS = 50
+# A step this small, relative, is the last one: the next would be as its square.
+AT_REST = 1e-9
 # A crossing is accepted when the last Newton step moved it by less than this, relative.
 SETTLED = 1e-8
+# One that rounding hides is tried when it moved by less than this, relative.
+ROUGHLY = 1e-2
 
 
-def find_crossings(T: StateSpace, poles: Complex, target: Real | None) -> tuple[Index, Real, Bool]:
+@dataclass(frozen=True)
+class Crossings:
+    """Frequencies at which single loops cross.
+
+    Attributes
+    ----------
+    owner : (count,) int
+        The point of each crossing.
+    w : (count,) float
+        Frequencies [rad/s], positive and finite, exact to working precision; each once.
+    failed : (points,) bool
+        Where the eigenproblem failed, or crossings are missing.
+    hidden_owner, hidden_w : (more,) int and float
+        Places where rounding hides whether there is a crossing too [rad/s].
+    """
+
+    owner: Index
+    w: Real
+    failed: Bool
+    hidden_owner: Index
+    hidden_w: Real
+
+
+def find_crossings(T: StateSpace, poles: Complex, target: Real | None) -> Crossings:
     """Frequencies where T is real, or where its real part equals a target.
 
     Parameters
@@ -61,164 +87,159 @@ def find_crossings(T: StateSpace, poles: Complex, target: Real | None) -> tuple[
 
     Returns
     -------
-    owner : (count,) int
-        The point of each crossing.
-    w : (count,) float
-        Frequencies [rad/s], positive and finite, exact to working precision; each once.
-    failed : (points,) bool
-        Where the eigenproblem failed.
+    Crossings
 
     Examples
     --------
+    >>> from ssaudit.modes.poles import find_poles
     >>> A = np.array([[[0.0, 1.0, 0.0], [0.0, 0.0, 1.0], [-6.0, -11.0, -6.0]]])
     >>> B, C = np.array([[[0.0], [0.0], [1.0]]]), np.array([[[1.0, 0.0, 0.0]]])
     >>> T = StateSpace(A, B, C, np.zeros((1, 1, 1)))  # 1/((s + 1)(s + 2)(s + 3))
-    >>> find_crossings(T, find_poles(A)[0], None)[1].round(12) ** 2
+    >>> find_crossings(T, find_poles(A)[0], None).w.round(12) ** 2
     array([11.])
     """
-    points = len(T)
-    found = np.full((points, 2 * T.A.shape[-1]), np.nan)
-    failed = np.zeros(points, dtype=bool)
+    points, nowhere = len(T), (np.zeros(0, dtype=np.intp), np.zeros(0))
     if T.A.shape[-1] == 0:
-        return np.zeros(0, dtype=np.intp), np.zeros(0), failed
-    size = np.abs(poles)
-    wide = size.max(axis=1) > WIDEST_SQUARED * size.min(axis=1)
-    for chosen, solve in ((~wide, _solve_squared), (wide, _solve_plain)):
-        if chosen.any():
-            part = None if target is None else target[chosen]
-            w, failed[chosen] = solve(T[chosen], poles[chosen], part)
-            found[chosen, : w.shape[1]] = w
+        return Crossings(*nowhere, np.zeros(points, dtype=bool), *nowhere)
+    wide = spread_widely(poles)
+    found, failed = np.full(poles.shape, np.nan), np.zeros(points, dtype=bool)
+    found[~wide], failed[~wide] = solve_squared(T[~wide], poles[~wide], part_of(target, ~wide))
     owner, column = np.nonzero(found > 0)
-    owner, w = _settle(T, owner, found[owner, column], target)
-    if wide.any():
-        extra_owner, extra_w = _bracketed(T, poles, wide, owner, w, target)
-        both = np.append(owner, extra_owner), np.append(w, extra_w)
-        owner, w = _settle(T, *both, target)
-    return owner, w, failed
+    owner, w, rising = _settle(T, owner, found[owner, column], target)
+    regular = do_alternate(points, owner, rising, signs_at_limits(T, target))
+    again = np.nonzero(~regular | wide)[0]
+    if len(again) == 0:
+        return Crossings(owner, w, failed, *nowhere)
+    new = _search_again(T[again], poles[again], part_of(target, again))
+    failed[again] = new.failed
+    kept = ~np.isin(owner, again)
+    owner, w = np.append(owner[kept], again[new.owner]), np.append(w[kept], new.w)
+    return Crossings(*drop_doubles(owner, w), failed, again[new.hidden_owner], new.hidden_w)
 
 
-def _bracketed(
-    T: StateSpace, poles: Complex, wide: Bool, owner: Index, w: Real, target: Real | None
-) -> tuple[Index, Real]:
-    """Crossings that the eigenproblem missed, told by signs on the flanks of every resonance.
+def spread_widely(poles: Complex) -> Bool:
+    """Whether poles spread so widely that rounding endangers the slow ones.
 
-    With poles over many decades the slow ones are at the mercy of rounding. Between two looks of
-    different sign there must be an odd number of crossings; where there is not, one is bisected.
+    Parameters
+    ----------
+    poles : (points, n) complex
+
+    Returns
+    -------
+    (points,) bool
+
+    Examples
+    --------
+    >>> spread_widely(np.array([[-1.0 + 0j, -2.0], [-1.0, -1e6]]))
+    array([False,  True])
     """
-    chosen = np.nonzero(wide)[0]
-    centre, width = np.abs(poles[chosen].imag), np.abs(poles[chosen].real)
-    looks = centre[:, :, None] + width[:, :, None] * FLANKS
-    looks = np.sort(looks.reshape(len(chosen), -1), axis=1)
-    flat, place = np.repeat(chosen, looks.shape[1]), looks.ravel()
-    sign = _value_at(T, flat, place, target) > 0
-    count = _count_below(owner, w, flat, place)
-    turned, odd = sign[1:] != sign[:-1], np.diff(count) % 2 == 1
-    low = np.nonzero((flat[1:] == flat[:-1]) & (place[:-1] > 0) & turned & ~odd)[0]
-    start, end, rising = place[low], place[low + 1], sign[low + 1]
-    for _ in range(BISECTIONS):
-        middle = (start + end) / 2
-        up = (_value_at(T, flat[low], middle, target) > 0) == rising
-        start, end = np.where(up, start, middle), np.where(up, middle, end)
-    return flat[low], (start + end) / 2
+    size = np.abs(poles)
+    least, most = size.min(axis=1, initial=np.inf), size.max(axis=1, initial=0.0)
+    return np.asarray(most > WIDEST_SQUARED * least)
 
 
-def _count_below(owner: Index, w: Real, flat: Index, place: Real) -> Index:
-    """How many of the known crossings of its own point lie below each frequency."""
-    order = np.lexsort((np.append(np.zeros(len(w)), np.ones(len(flat))), np.append(w, place),
-                        np.append(owner, flat)))  # fmt: skip
-    known = order < len(w)
-    total = np.empty(len(order), dtype=np.intp)
-    total[order] = np.cumsum(known)
-    before = np.searchsorted(owner, flat)
-    return np.asarray(total[len(w) :] - before)
+def part_of(target: Real | None, chosen: Bool | Index) -> Real | None:
+    """Take the targets of chosen points, where there are any.
+
+    Parameters
+    ----------
+    target : (points,) float, optional
+    chosen : (points,) bool or (count,) int
+
+    Returns
+    -------
+    (count,) float, or None
+
+    Examples
+    --------
+    >>> part_of(np.array([1.0, 2.0]), np.array([1]))
+    array([2.])
+    """
+    return None if target is None else target[chosen]
 
 
-def _value_at(T: StateSpace, owner: Index, w: Real, target: Real | None) -> Real:
-    """Im T, or Re T less the target."""
-    value = respond(T, owner, w)[:, 0, 0]
-    return np.asarray(value.imag if target is None else value.real - target[owner])
+def _search_again(T: StateSpace, poles: Complex, target: Real | None) -> Crossings:
+    """Crossings band by band, those missed between looks; failed where they do not alternate."""
+    candidates, failed = solve_banded(T, poles, target)
+    owner, column = np.nonzero(candidates > 0)
+    owner, w, _ = _settle(T, owner, candidates[owner, column], target, rough=True)
+    looks = look_along(T, poles, target)
+    extra_owner, extra_w = find_missed(T, looks, owner, w, target)
+    owner, w, rising = _settle(
+        T, np.append(owner, extra_owner), np.append(w, extra_w), target, rough=True
+    )
+    unsure = _unsure(T, owner, w, target)
+    # What rounding alone sets apart from the crossing before it is no other one.
+    alike = (np.diff(owner) == 0) & (rising[1:] == rising[:-1])
+    fresh = np.append(True, ~(alike & (np.diff(w) <= unsure[1:] + unsure[:-1])))[: len(w)]
+    owner, w, rising, unsure = owner[fresh], w[fresh], rising[fresh], unsure[fresh]
+    failed |= ~do_alternate(len(T), owner, rising, signs_at_ends(T, poles, owner, w, target))
+    return Crossings(owner, w, failed, *find_hidden(looks, owner, w, unsure))
 
 
-def _solve_squared(T: StateSpace, poles: Complex, target: Real | None) -> tuple[Real, Bool]:
-    """Crossings from the zeros over x = -ω²."""
-    offset = np.zeros(len(T)) if target is None else T.D[:, 0, 0] - target
-    C = T.C if target is None else T.C @ T.A
-    typical = typical_frequency(poles)
-    shifts = typical[:, None] ** 2 * SHIFTS
-    x, failed = _zeros(T.A @ T.A, T.B, C, offset, poles**2, shifts)
-    with np.errstate(invalid="ignore"):
-        real = np.isfinite(x) & (x.real < 0) & (np.abs(x.imag) <= NEAR_REAL * np.abs(x))
-        return np.where(real, np.sqrt(np.where(real, -x.real, np.nan)), np.nan), failed
-
-
-def _solve_plain(T: StateSpace, poles: Complex, target: Real | None) -> tuple[Real, Bool]:
-    """Crossings from the zeros over s of T(s) - T(-s), or T(s) + T(-s) - 2 target."""
-    offset = np.zeros(len(T)) if target is None else 2 * (T.D[:, 0, 0] - target)
-    nothing = np.zeros_like(T.A)
-    A = join(T.A, nothing, nothing, -T.A)
-    B = np.concatenate([T.B, T.B], axis=1)
-    C = np.concatenate([T.C, T.C if target is None else -T.C], axis=2)
-    typical = typical_frequency(poles)
-    both = np.concatenate([poles, -poles], axis=1)
-    s, failed = _zeros(A, B, C, offset, both, typical[:, None] * np.sqrt(SHIFTS))
-    return near_axis(np.where(np.isfinite(s), s, 1e300))[0], failed
-
-
-def _zeros(
-    A: Real, B: Real, C: Real, offset: Real, poles: Complex, shifts: Real
-) -> tuple[Complex, Bool]:
-    """Zeros of offset + C (xI - A)⁻¹ B: shift and invert, at the best of some real shifts."""
-    gap = np.abs(poles[:, :, None] - shifts[:, None, :])
-    gap = (gap / (np.abs(poles)[:, :, None] + shifts[:, None, :])).min(axis=1)
-    order = np.argsort(-gap, axis=1)
-    points = len(A)
-    inverted = np.full(A.shape, np.nan)
-    shift = np.take_along_axis(shifts, order[:, :1], axis=1)[:, 0]
-    left = np.arange(points)
-    for column in order.T:
-        trial = shifts[left, column[left]]
-        matrix, relative = _invert_at(A[left], B[left], C[left], offset[left], trial)
-        good = relative > SMALL_AT_SHIFT
-        usable = np.isfinite(matrix).all(axis=(1, 2))
-        inverted[left[usable]], shift[left[usable]] = matrix[usable], trial[usable]
-        left = left[~(good & usable)]
-        if len(left) == 0:
-            break
-    mu, failed = find_poles(inverted)
+def _unsure(T: StateSpace, owner: Index, w: Real, target: Real | None) -> Real:
+    """How far rounding may move crossings [rad/s]."""
+    _, derivative = respond_with_slope(T, owner, w)
+    slope = derivative[:, 0, 0].imag if target is None else derivative[:, 0, 0].real
     with np.errstate(divide="ignore", invalid="ignore"):
-        x = shift[:, None] + np.where(mu == 0, np.inf, 1 / np.where(mu == 0, 1.0, mu))
-    return np.asarray(x, dtype=complex), failed | np.isnan(mu).any(axis=1)
+        return np.asarray(response_error(T, owner, on_axis(w))[:, 0, 0] / np.abs(slope))
 
 
-def _invert_at(A: Real, B: Real, C: Real, offset: Real, shift: Real) -> tuple[Real, Real]:
-    """Matrix with eigenvalues 1/(x - shift) for the zeros x; relative size at the shift."""
-    inner = invert(A - shift[:, None, None] * np.eye(A.shape[-1]))
-    left, right = inner @ B, C @ inner
-    through = offset - (C @ left)[:, 0, 0]
-    terms = np.abs(offset) + np.linalg.norm(right, axis=(1, 2)) * np.linalg.norm(B, axis=(1, 2))
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        matrix = inner + left @ right / through[:, None, None]
-        relative = np.abs(through) / np.where(terms > 0, terms, 1.0)
-    # Nothing but rounding: the function is zero throughout, and so has no zeros to be found.
-    matrix[relative < ZERO_THROUGHOUT] = 0
-    return matrix, relative
+def _settle(
+    T: StateSpace, owner: Index, w: Real, target: Real | None, *, rough: bool = False
+) -> tuple[Index, Real, Bool]:
+    """Newton steps on T(jω) itself; what does not settle is no crossing, doubles go.
 
-
-def _settle(T: StateSpace, owner: Index, w: Real, target: Real | None) -> tuple[Index, Real]:
-    """Newton steps on T(jω) itself; what does not settle is no crossing, doubles go."""
-    step = np.zeros_like(w)
+    The last result says where the function rises with frequency. Roughly, a crossing may also be
+    as uncertain as rounding makes it.
+    """
+    w, slope, step = w.copy(), np.zeros_like(w), np.full_like(w, np.inf)
+    moving = np.arange(len(w))
     for _ in range(NEWTON_STEPS):
-        response, slope = respond_with_slope(T, owner, w)
-        value, rate = response[:, 0, 0], slope[:, 0, 0]
+        response, derivative = respond_with_slope(T, owner[moving], w[moving])
+        value, rate = response[:, 0, 0], derivative[:, 0, 0]
+        error = value.imag if target is None else value.real - target[owner[moving]]
+        slope[moving] = rate.imag if target is None else rate.real
         with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-            if target is None:
-                step = value.imag / rate.imag
-            else:
-                step = (value.real - target[owner]) / rate.real
-        w = w - np.where(np.isfinite(step), step, 0.0)
+            step[moving] = error / slope[moving]
+        w[moving] -= np.where(np.isfinite(step[moving]), step[moving], 0.0)
+        moving = moving[~(np.abs(step[moving]) <= AT_REST * w[moving])]
+        if len(moving) == 0:
+            break
     with np.errstate(invalid="ignore"):
         settled = (np.abs(step) <= SETTLED * w) & (w > 0) & np.isfinite(step)
-    return drop_doubles(owner[settled], w[settled])
+    if rough:
+        # Some move on and on, because rounding hides where they are.
+        rest = np.nonzero(~settled & (w > 0) & (np.abs(step) < ROUGHLY * w))[0]
+        unsure = _unsure(T, owner[rest], w[rest], target)
+        settled[rest] = np.abs(step[rest]) <= unsure
+    owner, w, slope = owner[settled], w[settled], slope[settled]
+    order = np.lexsort((w, owner))
+    owner, w, slope = owner[order], w[order], slope[order]
+    fresh = first_of_each(owner, w)
+    return owner[fresh], w[fresh], slope[fresh] > 0
+
+
+def first_of_each(owner: Index, w: Real) -> Bool:
+    """Mark the first of frequencies that agree to 1e-11, sorted by point and size.
+
+    Parameters
+    ----------
+    owner : (count,) int
+    w : (count,) float
+
+    Returns
+    -------
+    (count,) bool
+
+    Examples
+    --------
+    >>> first_of_each(np.array([0, 0, 1]), np.array([2.0, 2.0, 2.0]))
+    array([ True, False,  True])
+    """
+    fresh: NDArray[np.bool_] = np.ones(len(w), dtype=bool)
+    fresh[1:] = (np.diff(owner) > 0) | (np.diff(w) > 1e-11 * w[1:])
+    return fresh
 
 
 def drop_doubles(owner: Index, w: Real) -> tuple[Index, Real]:
@@ -241,6 +262,5 @@ def drop_doubles(owner: Index, w: Real) -> tuple[Index, Real]:
     """
     order = np.lexsort((w, owner))
     owner, w = owner[order], w[order]
-    fresh: NDArray[np.bool_] = np.ones(len(w), dtype=bool)
-    fresh[1:] = (np.diff(owner) > 0) | (np.diff(w) > 1e-11 * w[1:])
+    fresh = first_of_each(owner, w)
     return owner[fresh], w[fresh]

@@ -115,8 +115,10 @@ def find_unit_crossings(loop: StateSpace) -> UnitCrossings:
     base, T, poles = _close_clear(loop)
     failed = ~finite_points(T.A, T.D)
     sound = np.nonzero(~failed)[0]
-    owner, w, failed[sound] = find_crossings(T[sound], poles[sound], base[sound] / 2)
-    owner = sound[owner]
+    found = find_crossings(T[sound], poles[sound], base[sound] / 2)
+    failed[sound] = found.failed
+    failed[sound[found.hidden_owner]] = True
+    owner, w = sound[found.owner], found.w
     response, slope = respond_with_slope(T, owner, w)
     t, k = response[:, 0, 0], base[owner]
     L = t / (1 - k * t)

@@ -6,10 +6,9 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from ssaudit.errors import LoopError
-from ssaudit.margins.balance import balance_loop
-from ssaudit.margins.sensitivity import peak_where
+from ssaudit.margins.sensitivity import close_loop, given_form, peak_where
 from ssaudit.margins.stability_radius import find_stable, join
-from ssaudit.margins.state_space import Bool, Real, StateSpace, read_loop, sensitivity_of
+from ssaudit.margins.state_space import Bool, Real, StateSpace, read_loop
 
 
 @dataclass(frozen=True)
@@ -73,11 +72,10 @@ def find_disk_margin(
     >>> margin.alpha.round(6), margin.phase_deg.round(4)
     (array([2.]), array([90.]))
     """
-    loop = balance_loop(read_loop(A, B, C, D))
-    S = sensitivity_of(loop)
-    stable = find_stable(S.A, dt)[1]
+    S, carried = close_loop(read_loop(A, B, C, D), dt)
+    stable = find_stable(given_form(S, dt).A, dt)[1]
     half = StateSpace(S.A, S.B, S.C, S.D - np.eye(S.D.shape[-1]) / 2)
-    peak = peak_where(half, dt, stable, structured=True)
+    peak = peak_where(half, dt, stable, structured=True, carried=carried)
     with np.errstate(divide="ignore"):
         alpha = 1 / peak.value
     low, high, phase = spread_of(alpha)

@@ -6,43 +6,31 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from ssaudit.margins.balance import balance_loop
-from ssaudit.margins.crossings import WIDEST_SQUARED, find_crossings
-from ssaudit.margins.stability_radius import find_stable, finite_points
-from ssaudit.margins.state_space import (
-    Bool,
-    Complex,
-    Index,
-    Real,
-    StateSpace,
-    feed_back,
-    read_loop,
-    respond,
-    response_noise,
-    to_continuous,
-    unwarp,
+from ssaudit.margins.gain_checks import (
+    DROWNING,
+    FAR_OUT,
+    FARTHEST,
+    between,
+    between_outside,
+    count_right,
+    may_be_stable,
+    never_stable,
 )
-from ssaudit.margins.tensor_crossings import MOST_STATES, find_gain_crossings
-from ssaudit.modes.poles import find_poles
+from ssaudit.margins.gain_crossings import (
+    HIDDEN_FACTOR,
+    GainCrossings,
+    locate_crossings,
+)
+from ssaudit.margins.state_space import Bool, Index, Real, StateSpace, read_loop
 
-# Factors at which the loop may be closed to look for crossings; the first is taken unless it
-# puts a pole on the boundary (or the loop is ill-posed there).
-BASE_FACTORS = np.array([1.0, 0.817, 1.239, 0.371, -0.613, 2.71])
-# Nearer to the boundary than this, relative to the fastest pole, another factor is taken.
-CLEAR_OF_BOUNDARY = 1e-7
-# Factors are found as differences from 1 or so: one this small is zero to working precision.
-ZERO_FACTOR = 1e-13
-# Real matrices have exactly real eigenvalues, or pairs; rounding splits double ones by less.
-REAL_EIGENVALUE = 1e-7
-# Crossings whose factors agree to this are one.
-SAME_FACTOR = 1e-10
-# An end with stable poles on both sides counts when a pole is this near the boundary there.
-TOUCHING = 1e-6
-# Where there is no crossing, the poles are looked at this many times the last factor out.
-FAR_OUT = 100.0
-# And at this factor: a crossing beyond it that were missed would hardly matter.
-FARTHEST = 1e4
+# Ends are confirmed where rounding moves them by no more than this, relative or absolute.
+END_RTOL = 1e-6
+END_ATOL = 1e-9
 # Where poles spread widely, they are looked at these parts of the way to an end too.
-PROBES = np.array([1e-4, 1e-3, 0.01, 0.1, 0.8, 0.9, 0.97, 0.99, 0.999])
+PROBES = np.array([1e-4, 1e-3, 0.01, 0.1, 0.8, 0.9, 0.97, 0.99, 0.999, 1 - 1e-5, 1 - 1e-6])
+# Of several channels nothing but counts shows crossings that were missed: there they are taken
+# these parts of an interval from its ends too.
+FROM_ENDS = np.array([1e-6, 1e-5, 1e-3])
 # Where 1 is (nearly) a crossing itself, the nominal loop is on the boundary.
 AT_ONE = 1e-12
 
@@ -61,7 +49,8 @@ class GainRange:
     stable : (points,) bool
         Whether the loop is stable at factor 1.
     confirmed : (points,) bool
-        Whether the poles on both sides of each end agree; ends are NaN where not.
+        Whether the poles on both sides of each end agree with what crosses there, and rounding
+        moves no end by more than 1e-6; ends are NaN where not.
     """
 
     low: Real
@@ -83,7 +72,7 @@ class StableGains:
     low_frequency, high_frequency : (points, intervals) float
         Where a pole meets the boundary [rad/s], as in `GainRange`.
     confirmed : (points,) bool
-        False where the eigenproblem failed or the model is too large.
+        False where the numbers do not decide, or the model is too large.
     """
 
     low: Real
@@ -91,23 +80,6 @@ class StableGains:
     low_frequency: Real
     high_frequency: Real
     confirmed: Bool
-
-
-@dataclass(frozen=True)
-class GainCrossings:
-    """Factors at which a pole is on the boundary.
-
-    Attributes
-    ----------
-    factor, frequency : (points, any) float
-        In rising order of the factor, NaN-padded; [rad/s].
-    failed : (points,) bool
-        Where they could not be found.
-    """
-
-    factor: Real
-    frequency: Real
-    failed: Bool
 
 
 def find_gain_range(
@@ -119,7 +91,9 @@ def find_gain_range(
     ----------
     A, B, C, D : (points, n, n), (points, n, m), (points, m, n), (points, m, m) float
         The open loop L; the factor k multiplies all m channels: lost when I + kL is. With more
-        than one channel, models of more than 40 states are not confirmed.
+        than one channel, models of more than 40 states are not confirmed, and where poles spread
+        over more than four decades a limit beyond 1e6 (120 dB) is not told from none. With one
+        channel that is so beyond 1e9.
     dt : float
         Sampling time [s]; 0 means continuous.
 
@@ -179,180 +153,134 @@ def find_stable_gains(
     nowhere = np.full((points, 1), np.nan)
     frequency = np.concatenate([nowhere, crossings.frequency, nowhere], axis=1)
     owner, column = np.nonzero(factor[:, 1:] > factor[:, :-1])
-    probe = between(factor[owner, column], factor[owner, column + 1])
-    stable = stable_at(loop, owner, probe, dt)
+    least, most = _count_between(loop, owner, factor[owner, column], factor[owner, column + 1], dt)
+    confirmed = ~crossings.failed & _counts_agree(loop, crossings, owner, column, least, most)
+    stable = most == 0
     owner, column = owner[stable], column[stable]
+    for side in (0, 1):
+        confirmed &= _ends_certain(crossings, owner, column - 1 + side)
+    confirmed &= _doubts_are_known(crossings)
     place = np.arange(len(owner)) - np.searchsorted(owner, owner)
     width = int(place.max(initial=0)) + 1
     ends = np.full((4, points, width), np.nan)
     ends[0, owner, place], ends[1, owner, place] = factor[owner, column], factor[owner, column + 1]
     ends[2, owner, place] = frequency[owner, column]
     ends[3, owner, place] = frequency[owner, column + 1]
-    ends[:, crossings.failed] = np.nan
-    return StableGains(ends[0], ends[1], ends[2], ends[3], ~crossings.failed)
+    never = never_stable(loop, dt)
+    ends[:, ~confirmed | never] = np.nan
+    confirmed |= never
+    return StableGains(ends[0], ends[1], ends[2], ends[3], confirmed)
 
 
-def locate_crossings(loop: StateSpace, dt: float) -> GainCrossings:
-    """Factors, of any sign, at which a pole of the closed loop is on the boundary.
+def _count_between(
+    loop: StateSpace, owner: Index, low: Real, high: Real, dt: float
+) -> tuple[Index, Index]:
+    """Poles outside the region of stability in intervals without a crossing; farther ones too."""
+    least, most = count_right(loop, owner, between(low, high), dt)
+    for side, endless in ((-1, np.isinf(low)), (1, np.isinf(high))):
+        for factor in FARTHEST:
+            known = low if side > 0 else -high
+            beyond = np.nonzero(endless & (known < factor))[0]
+            far = np.full(len(beyond), side * factor)
+            less, more = count_right(loop, owner[beyond], far, dt, far=factor > DROWNING)
+            other = (less > most[beyond]) | (more < least[beyond])
+            if loop.D.shape[-1] > 1 and factor <= DROWNING:
+                other |= (most[beyond] == 0) & (more > 0)
+            least[beyond[other]] = -1
+    if loop.D.shape[-1] > 1:
+        least[~_alike_near_ends(loop, owner, low, high, least, most, dt)] = -1
+    return least, most
 
-    Parameters
-    ----------
-    loop : StateSpace
-        The open loop, balanced.
-    dt : float
-        Sampling time [s]; 0 means continuous.
 
-    Returns
-    -------
-    GainCrossings
+def _alike_near_ends(
+    loop: StateSpace, owner: Index, low: Real, high: Real, least: Index, most: Index, dt: float
+) -> Bool:
+    """Whether counts just inside both ends of intervals may be the same as in the middle."""
+    alike = np.ones(len(owner), dtype=bool)
+    inside = between(low, high)
+    for end in (low, high):
+        chosen = np.nonzero(np.isfinite(end))[0]
+        for part in FROM_ENDS:
+            width = np.minimum(np.abs(inside - end), 1 + np.abs(end))[chosen]
+            factor = end[chosen] + np.sign(inside - end)[chosen] * part * width
+            less, more = count_right(loop, owner[chosen], factor, dt)
+            alike[chosen] &= (less <= most[chosen]) & (more >= least[chosen])
+    return alike
 
-    Examples
-    --------
-    >>> one = np.ones((1, 1, 1))
-    >>> locate_crossings(StateSpace(-one, one, one, 0 * one), 0.0).factor
-    array([[-1.]])
+
+def _counts_agree(
+    loop: StateSpace,
+    crossings: GainCrossings,
+    owner: Index,
+    column: Index,
+    least: Index,
+    most: Index,
+) -> Bool:
+    """Whether the poles counted in all intervals differ by those that cross between them."""
+    agreed = np.ones(len(loop), dtype=bool)
+    # Neither stable nor not, or other than at another factor of the same interval.
+    agreed[owner[((least == 0) & (most > 0)) | (least < 0)]] = False
+    left = np.nonzero(owner[1:] == owner[:-1])[0]
+    own, at = owner[left], column[left]
+    _, change, several = crossings.examine(own, at)
+    below, above = (least[left], most[left]), (least[left + 1], most[left + 1])
+    agreed[own[~_changes_fit(change, several, crossings.jump[own, at], below, above)]] = False
+    return agreed
+
+
+def _changes_fit(
+    change: Index,
+    several: Bool,
+    jump: Real,
+    below: tuple[Index, Index],
+    above: tuple[Index, Index],
+) -> Bool:
+    """Whether counts of unstable poles on both sides of crossings fit what crosses there.
+
+    Where the direction is not known it may be either; where crossings coincide, any number up to
+    their sum may cross.
     """
-    base, T, poles = _close_at_base(loop, dt)
-    points = len(loop)
-    failed = ~finite_points(T.A, T.D)
-    sound = np.nonzero(~failed)[0]
-    owner, w, change = _settled_changes(T[sound], poles[sound], failed, sound)
-    return _arrange(points, sound[owner], unwarp(w, dt), base[sound[owner]] + change, failed)
+    smallest, largest = above[0] - below[1], above[1] - below[0]
+
+    def may_be(wanted: Real | Index) -> Bool:
+        return np.asarray((smallest <= wanted) & (wanted <= largest))
+
+    single = np.where(change != 0, may_be(change), may_be(jump) | may_be(-jump))
+    return np.where(several, (smallest <= jump) & (largest >= -jump), single)
 
 
-def _close_at_base(loop: StateSpace, dt: float) -> tuple[Real, StateSpace, Complex]:
-    """Close each loop at a factor that leaves no pole on the boundary; map it to continuous."""
-    base = np.full(len(loop), BASE_FACTORS[0])
-    clearance = _clearance(loop, base, dt)
-    near = np.nonzero(~(clearance > CLEAR_OF_BOUNDARY))[0]
-    for factor in BASE_FACTORS[1:]:
-        if len(near) == 0:
-            break
-        trial = np.full(len(near), factor)
-        found = _clearance(loop[near], trial, dt)
-        better = found > np.nan_to_num(clearance[near], nan=-1.0)
-        base[near[better]], clearance[near[better]] = factor, found[better]
-    T = to_continuous(feed_back(loop, base), dt)
-    return base, T, find_poles(T.A)[0]
+def _ends_certain(crossings: GainCrossings, owner: Index, column: Index) -> Bool:
+    """Whether rounding leaves the given ends where they are; columns off the table are no ends."""
+    certain = np.ones(len(crossings.failed), dtype=bool)
+    there = np.nonzero((column >= 0) & (column < crossings.factor.shape[1]))[0]
+    owner, column = owner[there], column[there]
+    error, _, _ = crossings.examine(owner, column)
+    certain[owner[~_is_small(error, crossings.factor[owner, column])]] = False
+    return certain
 
 
-def _clearance(loop: StateSpace, factor: Real, dt: float) -> Real:
-    """Distance of the nearest pole from the boundary, relative to the fastest pole."""
-    closed = feed_back(loop, factor)
-    poles, _ = find_poles(closed.A)
-    if poles.shape[1] == 0:
-        return np.where(np.isfinite(closed.D).all(axis=(1, 2)), 1.0, 0.0)
-    distance = np.abs(poles.real) if dt == 0 else np.abs(np.abs(poles) - 1)
-    largest = np.abs(poles).max(axis=1) if dt == 0 else 1.0
+def _is_small(error: Real, factor: Real) -> Bool:
+    """Whether errors of factors are within the stated accuracy, or there is no factor."""
+    return np.asarray((error <= END_RTOL * np.abs(factor) + END_ATOL) | np.isnan(factor))
+
+
+def _doubts_are_known(crossings: GainCrossings) -> Bool:
+    """Whether what rounding hides could only be at factors at which a crossing is known."""
+    doubtful = crossings.doubtful
+    slack = END_RTOL * np.abs(doubtful) + END_ATOL
+    distance = np.abs(doubtful[:, :, None] - crossings.factor[:, None, :])
     with np.errstate(invalid="ignore"):
-        return np.asarray(distance.min(axis=1) / largest)
+        known = (distance <= slack[:, :, None]).any(axis=2)
+    return np.asarray((known | ~(np.abs(doubtful) < HIDDEN_FACTOR)).all(axis=1))
 
 
-def _settled_changes(
-    T: StateSpace, poles: Complex, failed: Bool, sound: Index
-) -> tuple[Index, Real, Real]:
-    """Crossings at zero and infinite frequency and between, as changes of the factor."""
-    owner, w, change = _end_changes(T)
-    if T.D.shape[-1] == 1:
-        inner, inner_w, failed[sound] = find_crossings(T, poles, None)
-        with np.errstate(divide="ignore"):
-            value = respond(T, inner, inner_w)[:, 0, 0].real
-            inner_change = np.where(
-                np.abs(value) > response_noise(T, inner, inner_w), -1 / value, np.inf
-            )
-    elif T.A.shape[-1] <= MOST_STATES and T.A.shape[-1] > 0:
-        inner, inner_w, inner_change = find_gain_crossings(T)
-    else:
-        failed[sound] = T.A.shape[-1] > MOST_STATES
-        return owner, w, change
-    return (
-        np.concatenate([owner, inner]),
-        np.concatenate([w, inner_w]),
-        np.concatenate([change, inner_change]),
-    )
-
-
-def _end_changes(T: StateSpace) -> tuple[Index, Real, Real]:
-    """Crossings at zero and infinite frequency: real eigenvalues of T(0) and of D."""
-    owners, frequencies, changes = [], [], []
-    everyone = np.arange(len(T))
-    for w in (0.0, np.inf):
-        response = respond(T, everyone, np.full(len(T), w)).real
-        eigenvalues = find_poles(response)[0]
-        size = np.abs(eigenvalues)
-        noise = response_noise(T, everyone, np.full(len(T), w))[:, None]
-        real = (np.abs(eigenvalues.imag) <= REAL_EIGENVALUE * size) & (size > noise)
-        owner, column = np.nonzero(real)
-        owners.append(owner)
-        frequencies.append(np.full(len(owner), w))
-        changes.append(-1 / eigenvalues[owner, column].real)
-    return np.concatenate(owners), np.concatenate(frequencies), np.concatenate(changes)
-
-
-def _arrange(points: int, owner: Index, w: Real, factor: Real, failed: Bool) -> GainCrossings:
-    """Sort crossings by point and factor, merge equal ones, and pad to a rectangle."""
-    finite = np.isfinite(factor)
-    factor = np.where(np.abs(factor) < ZERO_FACTOR, 0.0, factor)
-    owner, w, factor = owner[finite], w[finite], factor[finite]
-    order = np.lexsort((factor, owner))
-    owner, w, factor = owner[order], w[order], factor[order]
-    fresh = np.ones(len(factor), dtype=bool)
-    fresh[1:] = (np.diff(owner) > 0) | (np.diff(factor) > SAME_FACTOR * np.abs(factor[1:]))
-    owner, w, factor = owner[fresh], w[fresh], factor[fresh]
-    place = np.arange(len(owner)) - np.searchsorted(owner, owner)
-    table = np.full((2, points, int(place.max(initial=0)) + 1), np.nan)
-    table[0, owner, place], table[1, owner, place] = factor, w
-    return GainCrossings(table[0], table[1], failed)
-
-
-def between(low: Real, high: Real) -> Real:
-    """Pick a factor between two crossings, or well beyond the last one.
-
-    Parameters
-    ----------
-    low, high : (...) float
-        May be infinite.
-
-    Returns
-    -------
-    (...) float
-
-    Examples
-    --------
-    >>> between(np.array([1.0, 2.0]), np.array([3.0, np.inf]))
-    array([  2., 302.])
-    """
-    first, last = np.isinf(low), np.isinf(high)
-    near, far = np.where(first, high, low), np.where(last, low, high)
-    reach = FAR_OUT * (1 + np.abs(np.where(first & last, 0.0, near)))
+def _is_doubtful(crossings: GainCrossings, low: Real, high: Real) -> Bool:
+    """Whether rounding may hide a crossing between two ends."""
+    doubtful = crossings.doubtful
+    slack = END_RTOL * np.abs(doubtful) + END_ATOL
     with np.errstate(invalid="ignore"):
-        inside = np.where(first, far - reach, np.where(last, near + reach, near + (far - near) / 2))
-    return np.where(first & last, 0.5, inside)
-
-
-def stable_at(loop: StateSpace, owner: Index, factor: Real, dt: float) -> Bool:
-    """Whether loops are stable at given factors, by their poles.
-
-    Parameters
-    ----------
-    loop : StateSpace
-    owner : (count,) int
-    factor : (count,) float
-    dt : float
-        Sampling time [s]; 0 means continuous.
-
-    Returns
-    -------
-    (count,) bool
-
-    Examples
-    --------
-    >>> one = np.ones((1, 1, 1))
-    >>> loop = StateSpace(-one, one, one, 0 * one)
-    >>> stable_at(loop, np.array([0, 0]), np.array([0.0, -3.0]), 0.0)
-    array([ True, False])
-    """
-    return find_stable(feed_back(loop[owner], factor).A, dt)[1]
+        inside = (doubtful - slack > low[:, None]) & (doubtful + slack < high[:, None])
+    return np.asarray((inside & (np.abs(doubtful) < HIDDEN_FACTOR)).any(axis=1))
 
 
 def range_around_one(loop: StateSpace, crossings: GainCrossings, dt: float) -> GainRange:
@@ -380,13 +308,15 @@ def range_around_one(loop: StateSpace, crossings: GainCrossings, dt: float) -> G
     """
     points = np.arange(len(loop))
     at_one = (np.abs(crossings.factor - 1) <= AT_ONE).any(axis=1)
-    stable = stable_at(loop, points, np.ones(len(loop)), dt) & ~at_one
-    confirmed = ~crossings.failed
+    least, most = count_right(loop, points, np.ones(len(loop)), dt)
+    stable = (most == 0) & ~at_one
+    confirmed = ~crossings.failed & (stable | at_one | (least > 0))
     ends = []
     for side in (-1, 1):
         end, frequency, agreed = _end_on_side(loop, crossings, side, dt)
         confirmed = confirmed & (agreed | ~stable)
         ends += [end, frequency]
+    confirmed &= ~(stable & _is_doubtful(crossings, ends[0], ends[2]))
     low, low_frequency, high, high_frequency = (
         np.where(stable & confirmed, value, np.nan) for value in ends
     )
@@ -397,63 +327,48 @@ def _end_on_side(
     loop: StateSpace, crossings: GainCrossings, side: int, dt: float
 ) -> tuple[Real, Real, Bool]:
     """Find the crossing next to 1 above (side 1) or below (-1), and whether the poles agree."""
-    out = side * (crossings.factor - 1)
-    out = np.where(out > 0, out, np.inf)
-    pad = np.full((len(loop), 2), np.inf)
-    order = np.argsort(np.concatenate([out, pad], axis=1), axis=1)[:, :2]
-    nearest, beyond = np.take_along_axis(np.concatenate([out, pad], axis=1), order, axis=1).T
-    padded = np.concatenate([crossings.frequency, pad * np.nan], axis=1)
-    frequency = np.take_along_axis(padded, order[:, :1], axis=1)[:, 0]
-    frequency = np.where(np.isinf(nearest), np.nan, frequency)
-    end = 1 + side * nearest
-    endless = np.isinf(nearest)
-    inside = 1 + side * np.where(endless, FAR_OUT, nearest / 2)
-    outside = np.where(endless, inside, between_outside(nearest, beyond) * side + 1)
     points = np.arange(len(loop))
-    inner = stable_at(loop, points, inside, dt)
-    inner[endless] &= stable_at(loop, points[endless], np.full(endless.sum(), side * FARTHEST), dt)
-    inner &= _stable_on_the_way(loop, np.where(endless, side * FARTHEST, end), dt)
-    outer = stable_at(loop, points, outside, dt)
-    # Where the loop is ill-posed there need not be unstable poles beyond.
-    touching = np.isinf(frequency)
-    doubted = np.nonzero(inner & outer & ~endless & ~touching)[0]
-    if len(doubted):
-        touching[doubted] = _clearance(loop[doubted], end[doubted], dt) <= TOUCHING
-    return end, frequency, inner & (endless | ~outer | touching)
+    out = side * (crossings.factor - 1)
+    pad = np.full((len(loop), 2), np.inf)
+    out = np.concatenate([np.where(out > 0, out, np.inf), pad], axis=1)
+    order = np.argsort(out, axis=1)[:, :2]
+    nearest, beyond = np.take_along_axis(out, order, axis=1).T
+    endless = np.isinf(nearest)
+    column = np.where(endless, -1, order[:, 0])
+    frequency, jump = (
+        np.where(endless, np.nan, table[points, column])
+        for table in (crossings.frequency, crossings.jump)
+    )
+    end = 1 + side * nearest
+    inner = _stable_inside(loop, crossings.wide, end, side, dt)
+    outside = np.where(endless, 1.0, between_outside(nearest, beyond) * side + 1)
+    outer = count_right(loop, points, outside, dt)
+    error, change, several = crossings.examine(points, column)
+    none = np.zeros(len(loop), dtype=np.intp)
+    fits = _changes_fit(side * change, several, jump, (none, none), outer)
+    certain = _is_small(error, np.where(endless, np.nan, end))
+    return end, frequency, inner & (endless | (fits & certain))
 
 
-def _stable_on_the_way(loop: StateSpace, end: Real, dt: float) -> Bool:
-    """Whether loops whose poles spread widely are stable at some factors on the way to the end.
-
-    Among such poles a slow crossing may be missed (see `ssaudit.margins.crossings`).
-    """
-    size = np.abs(find_poles(feed_back(loop, np.ones(len(loop))).A)[0])
-    wide = size.max(axis=1, initial=0.0) > WIDEST_SQUARED * size.min(axis=1, initial=np.inf)
-    chosen = np.nonzero(wide & np.isfinite(end))[0]
-    owner = np.repeat(chosen, len(PROBES))
-    steady = np.ones(len(loop), dtype=bool)
-    if len(owner):
-        factor = 1 + (end[owner] - 1) * np.tile(PROBES, len(chosen))
-        np.logical_and.at(steady, owner, stable_at(loop, owner, factor, dt))
+def _stable_inside(loop: StateSpace, wide: Bool, end: Real, side: int, dt: float) -> Bool:
+    """Whether no pole is lost on the way to the end, or far out where there is none."""
+    points, endless = np.arange(len(loop)), np.isinf(end)
+    halfway = np.where(endless, 1 + side * FAR_OUT, (1 + np.where(endless, 1.0, end)) / 2)
+    owners, factors = [points], [halfway]
+    for number, factor in enumerate(FARTHEST):
+        chosen = np.nonzero(endless & (wide | (number == 0)))[0]
+        owners.append(chosen)
+        factors.append(np.full(len(chosen), side * factor))
+    # Among widely spread poles a slow crossing may be missed.
+    chosen = np.nonzero(wide)[0]
+    last = np.where(endless, side * FARTHEST[0], end)[chosen]
+    owners.append(np.repeat(chosen, len(PROBES)))
+    factors.append((1 + (last[:, None] - 1) * PROBES).ravel())
+    steady = may_be_stable(loop, np.concatenate(owners), np.concatenate(factors), dt)
+    if loop.D.shape[-1] > 1:
+        # Nothing else tells whether crossings of several channels are all known.
+        chosen = np.nonzero(endless & wide & steady)[0]
+        for factor in FARTHEST[FARTHEST <= DROWNING]:
+            far = np.full(len(chosen), side * factor)
+            steady[chosen[count_right(loop, chosen, far, dt)[1] > 0]] = False
     return steady
-
-
-def between_outside(nearest: Real, beyond: Real) -> Real:
-    """Distance from 1 halfway from one crossing to the next, or half as far again.
-
-    Parameters
-    ----------
-    nearest, beyond : (points,) float
-        Distances of both crossings; ``beyond`` may be inf.
-
-    Returns
-    -------
-    (points,) float
-
-    Examples
-    --------
-    >>> between_outside(np.array([2.0, 2.0]), np.array([4.0, np.inf]))
-    array([3., 3.])
-    """
-    with np.errstate(invalid="ignore"):
-        return np.where(np.isinf(beyond), 1.5 * nearest, nearest + (beyond - nearest) / 2)

@@ -18,11 +18,9 @@ from ssaudit.margins.delayed import (
     find_unit_crossings,
     scale_loop,
 )
-from ssaudit.margins.gain_range import (
-    between_outside,
-    locate_crossings,
-    range_around_one,
-)
+from ssaudit.margins.gain_checks import between_outside
+from ssaudit.margins.gain_crossings import locate_crossings
+from ssaudit.margins.gain_range import range_around_one
 from ssaudit.margins.stability_radius import find_stable
 from ssaudit.margins.state_space import (
     Bool,
@@ -190,8 +188,10 @@ def _unit_circle(loop: StateSpace, stable: Bool, dt: float) -> tuple[Index, Real
     chosen = np.nonzero(stable)[0]
     T = to_continuous(feed_back(loop[chosen], np.ones(len(chosen))), dt)
     poles = find_stable(T.A, 0.0)[0]
-    owner, w, failed[chosen] = find_crossings(T, poles, np.full(len(chosen), 0.5))
-    failed[chosen] |= _odd_one_out(T, owner)
+    found = find_crossings(T, poles, np.full(len(chosen), 0.5))
+    owner, w = found.owner, found.w
+    failed[chosen] = found.failed | _odd_one_out(T, owner)
+    failed[chosen[found.hidden_owner]] = True
     t = respond(T, owner, w)[:, 0, 0]
     return chosen[owner], unwarp(w, dt), np.angle(-t / (1 - t)), failed
 

@@ -3,19 +3,22 @@
 import numpy as np
 
 from ssaudit.margins.balance import balance_states
-from ssaudit.margins.state_space import Bool, Complex, Real
+from ssaudit.margins.state_space import Complex, Real
 from ssaudit.modes.poles import isolate
 
 # log of the largest ratio of two scales that is tried on either side of the balanced ones.
 LOG_REACH = 12.0
 GOLDEN = (np.sqrt(5) - 1) / 2
 # 0.618^56 of 24 is 5e-11, and the largest singular value is flat, or a kink, at its minimum.
-GOLDEN_STEPS = 56
-ROUGH_STEPS = 12
+# A dozen steps tell what will fall below a floor.
+LINE_STEPS = (12, 56)
 # Powers p of the smooth stand-in tr((M* M)^p)^(1/2p), each minimised from the one before it.
 POWERS = (2.0, 16.0, 128.0, 1024.0)
 NEWTON_STEPS = 4
-DIFFERENCE = 1e-5
+# Squared singular values closer than this, relative, count as equal in a divided difference.
+EQUAL = 1e-5
+# Half steps shrink the error by 2 a sweep: enough for a guess.
+GUESS_SWEEPS = 6
 
 
 def norm_of_scaled(M: Complex, logs: Real) -> Real:
@@ -66,7 +69,7 @@ def balance_logs(M: Complex) -> Real:
     >>> round(float(np.exp(x[0, 1] - x[0, 0])), 9)
     2.0
     """
-    logs = -np.log(balance_states(np.abs(M)))
+    logs = -np.log(balance_states(np.abs(M), GUESS_SWEEPS))
     return np.asarray(logs - logs[:, :1])
 
 
@@ -102,18 +105,21 @@ def smallest_scaling(M: Complex, floor: Real) -> tuple[Real, Real]:
     value = norm_of_scaled(M, logs)
     if M.shape[-1] == 1:
         return value, logs
-    search = _search_line if M.shape[-1] == 2 else _search_newton
-    for rough in (True, False):
+    two = M.shape[-1] == 2
+    begin = logs.copy()
+    for effort in LINE_STEPS if two else POWERS:
         left = np.nonzero(value > floor)[0]
-        if len(left):
-            found, found_logs = search(M[left], logs[left], rough)
-            better = found < value[left]
-            value[left[better]], logs[left[better]] = found[better], found_logs[better]
+        if len(left) == 0:
+            break
+        search = _search_line if two else _search_newton
+        found, found_logs, begin[left] = search(M[left], begin[left], effort)
+        better = found < value[left]
+        value[left[better]], logs[left[better]] = found[better], found_logs[better]
     return value, logs
 
 
-def _search_line(M: Complex, logs: Real, rough: bool) -> tuple[Real, Real]:
-    """Golden-section search over the one ratio of two channels."""
+def _search_line(M: Complex, logs: Real, steps: float) -> tuple[Real, Real, Real]:
+    """Golden-section search over the one ratio of two channels; where to begin another."""
 
     def value_at(x: Real) -> Real:
         return norm_of_scaled(M, np.stack([np.zeros_like(x), x], axis=1))
@@ -121,7 +127,7 @@ def _search_line(M: Complex, logs: Real, rough: bool) -> tuple[Real, Real]:
     low, high = logs[:, 1] - LOG_REACH, logs[:, 1] + LOG_REACH
     x = np.stack([high - GOLDEN * (high - low), low + GOLDEN * (high - low)])
     value = np.stack([value_at(x[0]), value_at(x[1])])
-    for _ in range(ROUGH_STEPS if rough else GOLDEN_STEPS):
+    for _ in range(int(steps)):
         left = value[0] <= value[1]
         low, high = np.where(left, low, x[0]), np.where(left, x[1], high)
         fresh = np.where(left, high - GOLDEN * (high - low), low + GOLDEN * (high - low))
@@ -130,58 +136,84 @@ def _search_line(M: Complex, logs: Real, rough: bool) -> tuple[Real, Real]:
         value = np.where(left, [fresh_value, value[0]], [value[1], fresh_value])
     first = value[0] <= value[1]
     best = np.where(first, x[0], x[1])
-    return np.where(first, value[0], value[1]), np.stack([np.zeros_like(best), best], axis=1)
+    return np.where(first, value[0], value[1]), np.stack([np.zeros_like(best), best], axis=1), logs
 
 
-def _search_newton(M: Complex, logs: Real, rough: bool) -> tuple[Real, Real]:
-    """Damped Newton steps on smooth stand-ins of the norm, each closer to it."""
-    best, best_logs = norm_of_scaled(M, logs), logs.copy()
-    x = logs.copy()
-    for power in POWERS[:1] if rough else POWERS:
-        damping = np.full(len(M), 1e-3)
-        value, slope = _smooth_norm(M, x, power)
-        for _ in range(NEWTON_STEPS):
-            trial = x + _newton_step(M, x, slope, power, damping)
-            trial_value, trial_slope = _smooth_norm(M, trial, power)
-            better = trial_value < value
-            x[better], value[better] = trial[better], trial_value[better]
-            slope[better] = trial_slope[better]
-            damping = np.where(better, damping / 10, damping * 10)
-        found = norm_of_scaled(M, x)
-        lower = found < best
-        best[lower], best_logs[lower] = found[lower], x[lower]
-    return best, best_logs
+def _search_newton(M: Complex, logs: Real, power: float) -> tuple[Real, Real, Real]:
+    """Damped Newton steps on a smooth stand-in of the norm; the first scale stays at 1.
+
+    The third result is where the stand-in is smallest, a place to begin with a closer one.
+    """
+    x, damping = logs.copy(), np.full(len(M), 1e-3)
+    value, norm, slope, bend = _smooth_norm(M, x, power)
+    best, best_x = norm, x.copy()
+    for _ in range(NEWTON_STEPS):
+        damped = bend[:, 1:, 1:] + damping[:, None, None] * np.eye(x.shape[1] - 1)
+        (step,), _ = isolate(lambda H, g: (np.linalg.solve(H, g),), damped, -slope[:, 1:, None])
+        trial = x.copy()
+        trial[:, 1:] += np.clip(np.where(np.isnan(step), 0.0, step)[:, :, 0], -2.0, 2.0)
+        found = _smooth_norm(M, trial, power)
+        lower = found[1] < best
+        best, best_x = np.where(lower, found[1], best), np.where(lower[:, None], trial, best_x)
+        better = found[0] < value
+        x[better] = trial[better]
+        for kept, new in zip((value, slope, bend), (found[0], *found[2:]), strict=True):
+            kept[better] = new[better]
+        damping = np.where(better, damping / 10, damping * 10)
+    return best, best_x, x
 
 
-def _newton_step(M: Complex, x: Real, slope: Real, power: float, damping: Real) -> Real:
-    """Step from the slope and its differences; the first scale stays at 1."""
-    m = x.shape[1]
-    hessian = np.empty((len(x), m - 1, m - 1))
-    for i in range(1, m):
-        beside = x.copy()
-        beside[:, i] += DIFFERENCE
-        hessian[:, :, i - 1] = (_smooth_norm(M, beside, power)[1] - slope)[:, 1:] / DIFFERENCE
-    hessian = (hessian + hessian.swapaxes(1, 2)) / 2
-    damped = hessian + damping[:, None, None] * np.eye(m - 1)
-    step = np.zeros_like(x)
-    (solved,), _ = isolate(lambda H, g: (np.linalg.solve(H, g),), damped, -slope[:, 1:, None])
-    step[:, 1:] = np.clip(np.nan_to_num(solved[:, :, 0]), -2.0, 2.0)
-    return step
-
-
-def _smooth_norm(M: Complex, x: Real, power: float) -> tuple[Real, Real]:
-    """Log of tr((M* M)^p)^(1/2p) for the scaled M, and its gradient."""
+def _smooth_norm(M: Complex, x: Real, power: float) -> tuple[Real, Real, Real, Real]:
+    """Log of tr((M* M)^p)^(1/2p) for the scaled M, its norm, and the log's two derivatives."""
     scaled = M * np.exp(x[:, :, None] - x[:, None, :])
     (U, sigma, V), failed = isolate(lambda stack: tuple(np.linalg.svd(stack)), scaled)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        relative = (sigma / sigma[:, :1]) ** (2 * power)
-        value = np.log(sigma[:, 0]) + np.log(relative.sum(axis=1)) / (2 * power)
-    weight = relative / relative.sum(axis=1, keepdims=True)
-    moved = np.abs(U) ** 2 - np.abs(V.swapaxes(1, 2)) ** 2
-    slope = np.einsum("cik,ck->ci", moved, weight)
-    return _set_apart(value, failed), np.nan_to_num(slope)
+    with np.errstate(all="ignore"):
+        relative = sigma / sigma[:, :1]
+        total = (relative ** (2 * power)).sum(axis=1)
+        value = np.log(sigma[:, 0]) + np.log(total) / (2 * power)
+        slope, bend = _slope_and_bend(U, V.swapaxes(1, 2).conj(), relative, total, power)
+    # Infinite values where the decomposition failed, so that no step goes there.
+    failed |= ~np.isfinite(value)
+    value, norm = np.where(failed, np.inf, value), np.where(failed, np.inf, sigma[:, 0])
+    slope[failed], bend[failed] = 0.0, 0.0
+    return value, norm, slope, bend
 
 
-def _set_apart(value: Real, failed: Bool) -> Real:
-    """Infinite values where the decomposition failed, so that no step goes there."""
-    return np.where(failed | np.isnan(value), np.inf, value)
+def _slope_and_bend(
+    U: Complex, V: Complex, sigma: Real, total: Real, power: float
+) -> tuple[Real, Real]:
+    """Gradient and second derivatives from the singular vectors, the largest value being 1.
+
+    With H = M* M for the scaled M, and a_k, b_k the k-th channel's part of V* V and U* U, the
+    first derivatives of H are -a_k H - H a_k + 2 Σ b_k Σ in the basis V, and those of tr H^p
+    follow by divided differences of p λ^(p - 1) (Daleckii and Krein; from memory).
+    """
+    count, m = sigma.shape
+    square, pair = np.square(sigma), sigma[:, :, None] * sigma[:, None, :]
+    first = power * square ** (power - 1)
+    a = (V.conj()[:, :, :, None] * V[:, :, None, :]).reshape(count, m, m * m)
+    b = (U.conj()[:, :, :, None] * U[:, :, None, :]).reshape(count, m, m * m)
+    b_sized = b * pair.reshape(count, 1, -1)
+    change = 2 * b_sized - a * (square[:, :, None] + square[:, None, :]).reshape(count, 1, -1)
+    apart = square[:, :, None] - square[:, None, :]
+    middle = (square[:, :, None] + square[:, None, :]) / 2
+    equal = np.abs(apart) < EQUAL
+    divided = (first[:, :, None] - first[:, None, :]) / np.where(equal, 1.0, apart)
+    divided = np.where(equal, power * (power - 1) * middle ** (power - 2), divided)
+    weighted = a * (first[:, :, None] * square[:, None, :]).reshape(count, 1, -1)
+    crossed = a * np.repeat(first, m, axis=1)[:, None, :]
+    mixed = _real_product(crossed, b_sized)
+    bend = _real_product(change * divided.reshape(count, 1, -1), change)
+    bend += 2 * _real_product(weighted, a) - 4 * (mixed + mixed.swapaxes(1, 2))
+    own = np.abs(V) ** 2 + 2 * np.abs(U) ** 2
+    diagonal = np.arange(m)
+    bend[:, diagonal, diagonal] += 2 * np.einsum("cki,ci->ck", own, first * square)
+    moved = np.abs(U) ** 2 - np.abs(V) ** 2
+    slope = np.einsum("cki,ci->ck", moved, first * square) / (power * total[:, None])
+    bend = bend / (2 * power * total[:, None, None])
+    return slope, bend - 2 * power * slope[:, :, None] * slope[:, None, :]
+
+
+def _real_product(X: Complex, Y: Complex) -> Real:
+    """Real part of X times the conjugate transpose of Y."""
+    return np.asarray(X.real @ Y.real.swapaxes(1, 2) + X.imag @ Y.imag.swapaxes(1, 2))

@@ -6,13 +6,32 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from ssaudit.errors import BankError
-from ssaudit.margins.balance import balance_states
-from ssaudit.margins.peak_search import find_peak, near_axis
-from ssaudit.margins.state_space import Bool, Complex, Index, Real
+from ssaudit.margins.balance import balance_states, resolvent_of
+from ssaudit.margins.peak_search import (
+    BACKWARD,
+    Peak,
+    PlainNorm,
+    cover_left,
+    fill_in,
+    find_peak,
+    near_axis,
+)
+from ssaudit.margins.state_space import Bool, Complex, Index, Real, to_modes, unwarp
 from ssaudit.modes.poles import find_poles, isolate
 
 # Stated accuracy of the radius: no frequency has a value smaller than (1 - RADIUS_RTOL) of it.
 RADIUS_RTOL = 1e-7
+# What rounding of an eigenproblem may hide of that, so that nothing worse is left unseen.
+HIDDEN = 0.1 * RADIUS_RTOL
+# Limits of the last way: pieces of one point, halvings, and what stands for no singular value.
+MOST_CELLS = 20_000
+MOST_HALVINGS = 60
+TINY = 1e-300
+# Tolerance of the last way, and most of what rounding may add: there, eigenvectors that depend on
+# each other leave no more digits.
+LAST_RTOL = 5e-6
+# Corrections of the eigenvectors that are tried where rounding hides a peak.
+CORRECTIONS = 2
 # Real shifts, off the unit circle, at which the sampled pencil is inverted; the one farthest
 # from the poles and their mirror images is taken.
 SHIFTS = np.array([0.0, 0.33, -0.33, 0.61, -0.61, 1.47, -1.47, 2.9, -2.9])
@@ -132,7 +151,9 @@ def find_stability_radius(
     Returns
     -------
     StabilityRadius
-        The radius within a relative tolerance of 1e-7 from above.
+        The radius within a relative tolerance of 1e-7 from above; of 1e-6 where slow poles beside
+        fast ones leave no more digits, and of 1e-5 where eigenvectors that depend on each other
+        do not.
 
     References
     ----------
@@ -154,14 +175,72 @@ def find_stability_radius(
     confirmed = finite_points(models)
     chosen = np.nonzero(stable)[0]
     if len(chosen):
-        curve = Resolvent(models[chosen], poles[chosen], dt)
-        starts = boundary_frequencies(poles[chosen], dt)
-        norm = np.linalg.norm(models[chosen], axis=(1, 2))
-        upper = 2 * norm if dt == 0 else np.full(len(chosen), np.pi)
-        peak = find_peak(curve, starts, upper, upper / 2, RADIUS_RTOL)
+        peak = _search(models[chosen], poles[chosen], dt)
         radius[chosen], confirmed[chosen] = 1 / peak.value, peak.confirmed
-        frequency[chosen] = peak.frequency / (dt or 1.0)
+        frequency[chosen] = peak.frequency
     return StabilityRadius(radius, frequency, stable, confirmed)
+
+
+def _search(A: Real, poles: Complex, dt: float) -> Peak:
+    """Peak of the resolvent by level sets, and by a cover where rounding spoils those."""
+    curve = Resolvent(A, poles, dt)
+    norm = np.linalg.norm(A, axis=(1, 2))
+    upper = 2 * norm if dt == 0 else np.full(len(A), np.pi)
+    peak = find_peak(curve, boundary_frequencies(poles, dt), upper, upper / 2, RADIUS_RTOL)
+    with np.errstate(all="ignore"):
+        sure = peak.confirmed & (curve.hidden(peak.value * (1 + RADIUS_RTOL)) <= HIDDEN)
+    frequency = np.where(sure, peak.frequency / (dt or 1.0), np.nan)
+    peak = Peak(np.where(sure, peak.value, np.nan), frequency, sure)
+    left = np.nonzero(~peak.confirmed)[0]
+    if len(left):
+        beside = A[left] - (np.eye(A.shape[-1]) if dt > 0 else 0.0)
+        form = to_modes(resolvent_of(beside), sampled=dt > 0, steps=CORRECTIONS)
+        nothing = np.full(len(left), np.nan)
+        found = Peak(nothing, nothing.copy(), np.zeros(len(left), dtype=bool))
+        cover_left(found, np.arange(len(left)), form, PlainNorm(), RADIUS_RTOL)
+        fill_in(peak, left, Peak(found.value, unwarp(found.frequency, dt), found.confirmed))
+    left = np.nonzero(~peak.confirmed)[0]
+    if len(left):
+        with np.errstate(all="ignore"):
+            found = _cover_resolvent(Resolvent(A[left], poles[left], dt), upper[left])
+        fill_in(peak, left, Peak(found.value, found.frequency / (dt or 1.0), found.confirmed))
+    return peak
+
+
+def _cover_resolvent(curve: "Resolvent", upper: Real) -> Peak:
+    """Cover the boundary by what the resolvent itself tells of its neighbourhood.
+
+    For eigenvectors that depend on each other. σ_min changes no faster than s moves, and so the
+    resolvent's second derivative is bounded by twice its cube (on the circle its square more).
+    """
+    points = np.arange(len(upper))
+    value, frequency = np.zeros(len(upper)), np.zeros(len(upper))
+    owner, low, high = np.tile(points, 2), np.repeat([0.0, 0.5], len(points)), np.tile(upper, 2)
+    low, high = low * high, high * (0.5 + low)
+    ends = curve.hold(owner, low, low), curve.hold(owner, high, high)
+    confirmed = np.ones(len(upper), dtype=bool)
+    for _ in range(MOST_HALVINGS):
+        middle = (low + high) / 2
+        seen = curve.hold(owner, middle, middle)
+        for x, found in ((low, ends[0]), (high, ends[1]), (middle, seen)):
+            np.maximum.at(value, owner, found)
+            best = np.nonzero(found == value[owner])[0]
+            frequency[owner[best]] = x[best]
+        halves = (low, middle, ends[0], seen), (middle, high, seen, ends[1])
+        x, y, at_x, at_y = (np.concatenate(pair) for pair in zip(*halves, strict=True))
+        owner, length = np.tile(owner, 2), y - x
+        most = 1 / np.maximum((1 / at_x + 1 / at_y - length) / 2, TINY)
+        bend = 2 * most**3 + (0 if curve.dt == 0 else most**2)
+        level = value[owner] * (1 + LAST_RTOL)
+        left = ~(np.maximum(at_x, at_y) + np.square(length) / 8 * bend <= level)
+        many = np.bincount(owner[left], minlength=len(value)) > MOST_CELLS
+        confirmed &= (curve.rounding(value) <= LAST_RTOL) & ~many
+        left &= confirmed[owner]
+        owner, low, high, ends = owner[left], x[left], y[left], (at_x[left], at_y[left])
+        if len(owner) == 0:
+            break
+    confirmed[owner] = False
+    return Peak(np.where(confirmed, value, np.nan), frequency, confirmed)
 
 
 def scale_models(A: Real) -> Real:
@@ -277,14 +356,35 @@ class Resolvent:
             return near_axis(eigenvalues)
         return self._cross_circle(A, gamma, self.shift[owner])
 
+    def hidden(self, level: Real) -> Real:
+        """How much of a singular value, relative to the level, rounding may hide."""
+        rounding = 2 * self.A.shape[-1] * BACKWARD
+        if self.dt == 0:
+            return 2 * self.rounding(level)
+        gamma = (1 / level)[:, None, None] * np.eye(self.A.shape[-1])
+        at_shift, N = self._pencil(self.A, gamma, self.shift)
+        # The inverted pencil K is that of one that differs by (M - shift N) times the change of K.
+        (inverted,), _ = isolate(lambda P, Q: (np.linalg.solve(P, Q),), at_shift, N)
+        size = np.linalg.norm(at_shift, axis=(1, 2)) * np.linalg.norm(inverted, axis=(1, 2))
+        return np.asarray((1 + np.abs(self.shift)) * rounding * size * level)
+
+    def rounding(self, value: Real) -> Real:
+        """Error of a value from its singular value decomposition, relative."""
+        size = np.linalg.norm(self.A, axis=(1, 2)) + (1 / value if self.dt == 0 else 1.0)
+        return np.asarray(2 * self.A.shape[-1] * BACKWARD * size * value)
+
     @staticmethod
-    def _cross_circle(A: Real, gamma: Real, shift: Real) -> tuple[Real, Bool]:
-        """Do the same on the unit circle: the pencil M - zN, inverted at a real shift."""
+    def _pencil(A: Real, gamma: Real, shift: Real) -> tuple[Real, Real]:
+        """M - shift N and N of the pencil M - zN, singular where σ_min of zI - A is gamma."""
         identity = np.broadcast_to(np.eye(A.shape[-1]), A.shape)
         nothing = np.zeros_like(A)
         M = join(A, gamma, nothing, identity)
         N = join(identity, nothing, gamma, A.swapaxes(1, 2))
-        at_shift = M - shift[:, None, None] * N
+        return M - shift[:, None, None] * N, N
+
+    def _cross_circle(self, A: Real, gamma: Real, shift: Real) -> tuple[Real, Bool]:
+        """Do the same on the unit circle: the pencil M - zN, inverted at a real shift."""
+        at_shift, N = self._pencil(A, gamma, shift)
         (inverted,), _ = isolate(lambda P, Q: (np.linalg.solve(P, Q),), at_shift, N)
         mu, _ = find_poles(inverted)
         never = mu == 0  # z = inf, far from the circle

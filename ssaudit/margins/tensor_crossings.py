@@ -24,8 +24,17 @@ MOST_NUMBERS = 20_000_000
 NEAR_REAL = 1e-4
 # Eigenvalues smaller than this, relative, stand for κ = inf.
 SMALLEST = 1e-13
+# At a crossing a pole is this near to the axis, relative to its size, before Newton steps.
+NEAR_AXIS = 0.05
 NEWTON_STEPS = 6
 SETTLED = 1e-8
+# A step this small, relative, is the last one: the next would be as its square.
+AT_REST = 1e-9
+# Small beside rounding, and irregular.
+NUDGE = 3.7e-17 + 1.3e-16j
+# Crossings found more than once agree to this; singular values below that, relative, are zero.
+SAME = 1e-8
+SINGULAR = 1e-7
 
 
 def find_gain_crossings(T: StateSpace) -> tuple[Index, Real, Real]:
@@ -63,7 +72,9 @@ def find_gain_crossings(T: StateSpace) -> tuple[Index, Real, Real]:
     owner, column = np.nonzero(~np.isnan(mu))
     change = 1 / mu[owner, column]
     w = _frequencies(T, owner, change)
-    return _settle(T, owner, w, change)
+    likely = np.nonzero(w > 0)[0]
+    owner, w, change = owner[likely], w[likely], change[likely]
+    return _once_each(T, *_settle(T, owner, w, change))
 
 
 def _solve(T: StateSpace) -> Real:
@@ -98,31 +109,61 @@ def _solve_lyapunov(T: StateSpace) -> Real:
 
 
 def _frequencies(T: StateSpace, owner: Index, change: Real) -> Real:
-    """Frequency of the pole nearest to the axis at each factor."""
+    """Frequency of the pole nearest to the axis, for its size, at each factor; NaN if none is near.
+
+    Where none is, two poles stand opposite one another about the origin, which is no crossing.
+    """
     poles, _ = find_poles(feed_back(T[owner], change).A)
-    nearest = np.abs(poles.real).argmin(axis=1) if len(poles) else np.zeros(0, dtype=int)
-    return np.abs(np.take_along_axis(poles, nearest[:, None], axis=1)[:, 0].imag)
+    upper = np.where(poles.imag > 0, poles, np.nan)
+    angle = np.nan_to_num(np.abs(upper.real) / np.abs(upper), nan=np.inf)
+    nearest = angle.argmin(axis=1)[:, None]
+    w = np.take_along_axis(upper, nearest, axis=1)[:, 0].imag
+    return np.where(np.take_along_axis(angle, nearest, axis=1)[:, 0] < NEAR_AXIS, w, np.nan)
 
 
 def _settle(T: StateSpace, owner: Index, w: Real, change: Real) -> tuple[Index, Real, Real]:
     """Newton steps on det(I + κ T(jω)) = 0 in both unknowns; what does not settle goes."""
-    still = np.ones(len(owner), dtype=bool)
+    w, change = w.copy(), change.copy()
+    still, moving = np.ones(len(owner), dtype=bool), np.arange(len(owner))
     for _ in range(NEWTON_STEPS):
-        step_w, step_change = _newton_step(T, owner, w, change)
-        with np.errstate(invalid="ignore"):
-            still = (np.abs(step_w) <= SETTLED * w) & (np.abs(step_change) <= SETTLED * abs(change))
+        step_w, step_change = _newton_step(T, owner[moving], w[moving], change[moving])
+        with np.errstate(divide="ignore", invalid="ignore"):
+            size = np.maximum(np.abs(step_w) / w[moving], np.abs(step_change / change[moving]))
         # Exactly on the root the inverse does not exist: nothing is left to do there.
-        still |= ~np.isfinite(step_w) & np.isfinite(w)
-        w = w + np.where(np.isfinite(step_w), step_w, 0.0)
-        change = change + np.where(np.isfinite(step_change), step_change, 0.0)
+        size[~np.isfinite(step_w) & np.isfinite(w[moving])] = 0
+        still[moving] = size <= SETTLED
+        w[moving] += np.where(np.isfinite(step_w), step_w, 0.0)
+        change[moving] += np.where(np.isfinite(step_change), step_change, 0.0)
+        moving = moving[~(size <= AT_REST)]
+        if len(moving) == 0:
+            break
     still &= (w > 0) & (change != 0)
     return owner[still], w[still], change[still]
+
+
+def _once_each(T: StateSpace, owner: Index, w: Real, change: Real) -> tuple[Index, Real, Real]:
+    """Crossings in order of the factor, each as often as there are poles in its place."""
+    order = np.lexsort((w, change, owner))
+    owner, w, change = owner[order], w[order], change[order]
+    alike = np.diff(owner) == 0
+    alike &= np.diff(change) <= SAME * np.abs(change[1:])
+    alike &= np.abs(np.diff(w)) <= SAME * w[1:]
+    first = np.append(True, ~alike)[: len(owner)]
+    times = first.astype(np.intp)
+    repeated = np.nonzero(first & np.append(alike, False)[: len(owner)])[0]
+    if len(repeated):
+        response, _ = respond_with_slope(T, owner[repeated], w[repeated], slope=False)
+        loop = np.eye(T.D.shape[-1]) + change[repeated, None, None] * response
+        sizes = np.linalg.svd(loop, compute_uv=False)
+        times[repeated] = (sizes <= SINGULAR * np.maximum(sizes[:, :1], 1.0)).sum(axis=1).clip(1)
+    return np.repeat(owner, times), np.repeat(w, times), np.repeat(change, times)
 
 
 def _newton_step(T: StateSpace, owner: Index, w: Real, change: Real) -> tuple[Real, Real]:
     """Find the steps of ω and κ that make the determinant zero to first order."""
     response, slope = respond_with_slope(T, owner, w)
-    loop = np.eye(T.D.shape[-1]) + change[:, None, None] * response
+    # The nudge keeps matrices from being singular exactly, which would stop the whole stack.
+    loop = (1 + NUDGE) * np.eye(T.D.shape[-1]) + change[:, None, None] * response
     (solved,), _ = isolate(
         lambda M, R: (np.linalg.solve(M, R),), loop, np.concatenate([slope, response], axis=2)
     )

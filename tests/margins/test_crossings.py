@@ -21,10 +21,10 @@ def test_found_frequencies_against_high_precision(tools, target):
     A, B, C, D = tools.random(np.random.default_rng(1), 12, 6, direct=0.3)
     T = read_loop(A, B, C, D)
     wanted = None if target is None else np.full(12, target)
-    owner, w, failed = find_crossings(T, find_poles(A)[0], wanted)
-    assert not failed.any()
-    assert len(w) > 5
-    for p, frequency in zip(owner, w, strict=True):
+    found = find_crossings(T, find_poles(A)[0], wanted)
+    assert not found.failed.any()
+    assert len(found.w) > 5
+    for p, frequency in zip(found.owner, found.w, strict=True):
         value = exact_value(A[p], B[p], C[p], D[p], frequency)
         error = value.imag if target is None else value.real - target
         assert abs(error) < 1e-11 * max(1, abs(value))
@@ -36,7 +36,7 @@ def test_narrow_pair_of_crossings():
     A = np.array([[[0, wn, 0], [-wn, -2 * zeta * wn, 0], [0, 0, -1.0]]])
     B, C = np.array([[[0.0], [1.0], [1.0]]]), np.array([[[0.0, 4 * zeta * wn, 0.1]]])
     T = read_loop(A, B, C, np.zeros((1, 1, 1)))
-    _, w, _ = find_crossings(T, find_poles(A)[0], np.array([1.0]))
+    w = find_crossings(T, find_poles(A)[0], np.array([1.0])).w
     assert len(w) == 2
     np.testing.assert_allclose(w, wn, rtol=2e-5)
     np.testing.assert_allclose(respond(T, np.zeros(2, dtype=int), w).real, 1.0, rtol=1e-9)
@@ -51,7 +51,7 @@ def test_slow_crossing_beside_fast_poles_is_not_lost(tools):
     full_B = np.concatenate([B, np.zeros((1, 2, 1))], axis=1)
     full_C = np.array([[[0.0, 0.0, 0.0, 0.0, 2e5]]])
     T = read_loop(large, full_B, full_C, np.zeros((1, 1, 1)))
-    _, w, _ = find_crossings(T, find_poles(large)[0], None)
+    w = find_crossings(T, find_poles(large)[0], None).w
     assert np.any(np.abs(w - np.sqrt(11) * 1e-3) < 1e-6 * w)
 
 

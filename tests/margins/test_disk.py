@@ -3,7 +3,7 @@ import pytest
 
 from ssaudit.errors import LoopError
 from ssaudit.margins.disk import find_disk_margin, join_both_ends, spread_of
-from ssaudit.margins.scaling import norm_of_scaled, smallest_scaling
+from ssaudit.margins.scaling import _smooth_norm, norm_of_scaled, smallest_scaling
 from ssaudit.margins.state_space import StateSpace
 
 
@@ -122,3 +122,49 @@ def test_lost_points_and_shapes(tools):
     P = StateSpace(*(np.zeros((1, 1, 1)),) * 4)
     with pytest.raises(LoopError, match="1 signals to 1 inputs"):
         join_both_ends(P, StateSpace(*(np.zeros((1, 2, 2)),) * 4))
+
+
+@pytest.mark.parametrize("power", [2.0, 16.0, 128.0])
+def test_derivatives_of_the_smooth_norm_agree_with_differences(power):
+    rng = np.random.default_rng(5)
+    M = rng.standard_normal((6, 4, 4)) + 1j * rng.standard_normal((6, 4, 4))
+    M[0] = np.linalg.qr(M[0])[0]  # all singular values equal
+    x, h = 0.3 * rng.standard_normal((6, 4)), 1e-6
+    x[0] = 0
+    _, norm, slope, bend = _smooth_norm(M, x, power)
+    np.testing.assert_allclose(norm, norm_of_scaled(M, x), rtol=1e-12)
+    for k in range(4):
+        above, below = (_smooth_norm(M, x + sign * h * np.eye(4)[k], power) for sign in (1, -1))
+        np.testing.assert_allclose((above[0] - below[0]) / (2 * h), slope[:, k], atol=1e-8)
+        np.testing.assert_allclose((above[2] - below[2]) / (2 * h), bend[:, k], atol=1e-5)
+    assert np.linalg.eigvalsh(bend).min() > -1e-9  # it is convex
+    assert np.abs(bend).max() > 0.1
+
+
+@pytest.mark.parametrize("m", [2, 3])
+def test_several_channels_spread_over_decades(m):
+    # One loop a channel, each of its own decade, joined weakly: no frequency near any pole is
+    # worse than the margin found.
+    rng = np.random.default_rng(20 + m)
+    decided = 0
+    for _ in range(8):
+        n = 2 * m
+        A, B, C = np.zeros((n, n)), np.zeros((n, m)), np.zeros((m, n))
+        for i in range(m):
+            w, zeta = 10 ** rng.uniform(-4, 4), 10 ** rng.uniform(-4, -0.5)
+            A[2 * i : 2 * i + 2, 2 * i : 2 * i + 2] = w * np.array([[0, 1], [-1, -2 * zeta]])
+            B[2 * i + 1, i], C[:, 2 * i + 1] = 1, w * zeta * 0.3 * rng.standard_normal(m)
+            C[i, 2 * i + 1] = w * zeta
+        found = find_disk_margin(A[None], B[None], C[None], np.zeros((1, m, m)))
+        if not found.stable[0] or not found.confirmed[0]:
+            continue
+        decided += 1
+        p = np.linalg.eigvals(A - B @ C)
+        near = p.imag[:, None] + p.real[:, None] * np.linspace(-5, 5, 41)
+        w = np.concatenate([near[near > 0], np.geomspace(1e-6, 1e6, 300)])
+        X = np.linalg.solve(1j * w[:, None, None] * np.eye(n) - A, B.astype(complex)[None])
+        M = np.linalg.inv(np.eye(m) + C @ X) - np.eye(m) / 2
+        swept = smallest_scaling(M, np.zeros(len(M)))[0].max()
+        assert swept * found.alpha[0] <= 1 + (1e-6 if m == 2 else 2e-3)
+        assert swept * found.alpha[0] >= 0.99
+    assert decided >= 5

