@@ -10,6 +10,7 @@ import argparse
 import os
 import time
 from collections.abc import Callable
+from functools import partial
 
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
@@ -22,6 +23,7 @@ from ssaudit.modes.hidden import hidden_modes
 from ssaudit.modes.poles import find_modes
 from ssaudit.modes.proof import prove_stability
 from ssaudit.modes.radii import closed_loop_entry_error, pole_radii
+from ssaudit.modes.stacked import find_usable_modes
 
 REPETITIONS = 3
 CHUNK = 2_000
@@ -53,12 +55,12 @@ def all_in_chunks(A: np.ndarray, error: np.ndarray | None) -> None:
     """Vectors, left vectors, radii, participation and cross-checks, as an audit does them."""
     for start in range(0, len(A), CHUNK):
         part = A[start : start + CHUNK]
-        poles, right, left, _ = find_modes(part)
-        E = None if error is None else error[start : start + CHUNK]
-        radii = pole_radii(part, poles, right, left, entry_error=E)
-        np.abs(right * np.swapaxes(left, 1, 2))
-        stable = (poles.real + radii < 0).all(axis=1)
-        cross_check(part, poles, stable, (poles.real > radii).any(axis=1))
+        entry_error = None
+        if error is not None:
+            entry_error = partial(np.take, error[start : start + CHUNK], axis=0)
+        modes, _ = find_usable_modes(part, np.ones(len(part), dtype=bool), entry_error)
+        low, high = modes.real_range()
+        cross_check(part, modes.s, (high < 0).all(axis=1), (low > 0).any(axis=1))
 
 
 def main() -> None:
