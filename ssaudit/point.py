@@ -14,7 +14,7 @@ from ssaudit.distances import SingleLoop, break_without, find_distances, states_
 from ssaudit.errors import SsauditError
 from ssaudit.loop.closing import ClosedModels
 from ssaudit.loop.model import SIGNS, Loop
-from ssaudit.margins.gain_range import StableGains, find_stable_gains
+from ssaudit.margins.stable_gains import StableGains, find_stable_gains
 from ssaudit.modes.gain_derivatives import damping_derivatives, pole_derivatives
 from ssaudit.modes.poles import find_modes
 from ssaudit.settings import nearest

@@ -2,7 +2,8 @@
 
 import numpy as np
 
-from ssaudit.margins.state_space import Bool, Complex, Index, Real, StateSpace, respond_with_slope
+from ssaudit.margins.responses import respond_with_slope
+from ssaudit.margins.state_space import Bool, Complex, Index, Real, StateSpace
 from ssaudit.modes.poles import isolate
 
 # Rounding of one entry, with what gathers in a few operations.
@@ -10,7 +11,7 @@ ROUNDING = 1e-15
 # Of an entry of a system that is solved: eliminations mix entries with larger ones of their row.
 # Of 3,168 crossings against exact arithmetic 19 were off by more than the bound that this gives,
 # and those by no more than 2e-10 of the factor.
-RESPONSE_ROUNDING = 3e-15
+SOLVED_ROUNDING = 3e-15
 # A pole whose path makes a smaller angle than this with the axis may only touch it [rad].
 TANGENT = 1e-5
 # A slope smaller than this, relative to its terms, may be zero.
@@ -78,7 +79,7 @@ def response_error(system: StateSpace, owner: Index, s: Complex, size: Real | No
         right, left = _squared(inner @ system.B[owner]), _squared(system.C[owner] @ inner)
         through = left @ np.square(state) @ right + np.square(system.C[owner]) @ right
         terms = terms + np.where(near[:, None, None], through, 0.0)
-    return np.asarray(RESPONSE_ROUNDING * np.sqrt(terms))
+    return np.asarray(SOLVED_ROUNDING * np.sqrt(terms))
 
 
 def _squared(z: Complex) -> Real:

@@ -9,17 +9,8 @@ import numpy as np
 
 from ssaudit.margins.crossing_accuracy import ROUNDING, on_axis, response_error
 from ssaudit.margins.crossing_candidates import reach_of
-from ssaudit.margins.state_space import (
-    RESPONSE_ROUNDING,
-    Bool,
-    Complex,
-    Index,
-    Real,
-    StateSpace,
-    invert,
-    respond,
-    response_noise,
-)
+from ssaudit.margins.responses import RESPONSE_ROUNDING, respond, response_noise
+from ssaudit.margins.state_space import Bool, Complex, Index, Real, StateSpace, invert
 
 # Where each resonance is looked at, in half widths from its frequency.
 ABOVE = np.geomspace(0.1, 1e4, 11)

@@ -30,14 +30,8 @@ from ssaudit.margins.crossing_signs import (
     signs_at_ends,
     signs_at_limits,
 )
-from ssaudit.margins.state_space import (
-    Bool,
-    Complex,
-    Index,
-    Real,
-    StateSpace,
-    respond_with_slope,
-)
+from ssaudit.margins.responses import respond_with_slope
+from ssaudit.margins.state_space import Bool, Complex, Index, Real, StateSpace
 
 # Squaring A loses what is this much slower than the fastest pole; then bands are solved one by one.
 WIDEST_SQUARED = 1e4

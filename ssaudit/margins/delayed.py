@@ -14,19 +14,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from ssaudit.margins.crossings import drop_doubles, find_crossings
-from ssaudit.margins.peak_search import cut_pieces, middle_of
-from ssaudit.margins.stability_radius import finite_points
-from ssaudit.margins.state_space import (
-    Bool,
-    Complex,
-    Index,
-    Real,
-    StateSpace,
-    feed_back,
-    invert,
-    respond,
-    respond_with_slope,
-)
+from ssaudit.margins.pieces import cut_pieces, middle_of
+from ssaudit.margins.responses import respond, respond_with_slope
+from ssaudit.margins.state_matrices import finite_points
+from ssaudit.margins.state_space import Bool, Complex, Index, Real, StateSpace, feed_back, invert
 from ssaudit.modes.poles import find_poles
 
 # Gain margins of delayed loops are searched from 1/1000 to 1000 (60 dB); beyond: no limit.

@@ -1,18 +1,13 @@
-"""Checks of stable intervals of the gain factor: poles counted between the crossings."""
+"""Checks of stable intervals of the gain factor.
+
+Poles counted between the crossings, and whether the counts fit the crossings and their accuracy.
+"""
 
 import numpy as np
 
 from ssaudit.margins.balance import balance_loop
 from ssaudit.margins.crossing_accuracy import ROUNDING
-from ssaudit.margins.state_space import (
-    Bool,
-    Complex,
-    Index,
-    Real,
-    StateSpace,
-    feed_back,
-    invert,
-)
+from ssaudit.margins.state_space import Bool, Complex, Index, Real, StateSpace, feed_back, invert
 from ssaudit.modes.poles import find_modes, find_poles
 
 # Where there is no crossing, the poles are looked at this many times the last factor out.
@@ -28,6 +23,9 @@ NEAR_BOUNDARY = 1e-7
 DISTRUST = 4.0
 # Moved by the gain less than this, relative to what moves it at all, a pole is hidden from it.
 HIDDEN = 1e-12
+# Ends are confirmed where rounding moves them by no more than this, relative or absolute.
+END_RTOL = 1e-6
+END_ATOL = 1e-9
 
 
 def count_right(
@@ -241,3 +239,68 @@ def may_be_stable(loop: StateSpace, owner: Index, factor: Real, dt: float) -> Bo
             least, _ = count_right(loop, owner[chosen], factor[chosen], dt, far=far)
             steady[owner[chosen[least != 0]]] = False
     return steady
+
+
+def changes_fit(
+    change: Index,
+    several: Bool,
+    jump: Real,
+    below: tuple[Index, Index],
+    above: tuple[Index, Index],
+) -> Bool:
+    """Whether counts of unstable poles on both sides of crossings fit what crosses there.
+
+    Where the direction is not known it may be either; where crossings coincide, any number up to
+    their sum may cross.
+
+    Parameters
+    ----------
+    change : (count,) int
+        Poles that become unstable at each crossing, negative where stable; 0 where not known.
+    several : (count,) bool
+        Where crossings coincide.
+    jump : (count,) float
+        Most poles that may cross.
+    below, above : pair of (count,) int
+        Unstable poles on both sides, at least and at most.
+
+    Returns
+    -------
+    (count,) bool
+
+    Examples
+    --------
+    >>> none, two = (np.array([0]), np.array([0])), (np.array([2]), np.array([2]))
+    >>> upwards, single, pair = np.array([2]), np.array([False]), np.array([2.0])
+    >>> changes_fit(upwards, single, pair, none, two), changes_fit(upwards, single, pair, two, none)
+    (array([ True]), array([False]))
+    """
+    smallest, largest = above[0] - below[1], above[1] - below[0]
+
+    def may_be(wanted: Real | Index) -> Bool:
+        return np.asarray((smallest <= wanted) & (wanted <= largest))
+
+    single = np.where(change != 0, may_be(change), may_be(jump) | may_be(-jump))
+    return np.where(several, (smallest <= jump) & (largest >= -jump), single)
+
+
+def is_small(error: Real, factor: Real) -> Bool:
+    """Whether errors of factors are within the stated accuracy, or there is no factor.
+
+    Parameters
+    ----------
+    error : (count,) float
+        How far rounding may move each.
+    factor : (count,) float
+        NaN where there is none.
+
+    Returns
+    -------
+    (count,) bool
+
+    Examples
+    --------
+    >>> is_small(np.array([1e-8, 1e-5, np.nan]), np.array([2.0, 2.0, np.nan]))
+    array([ True, False,  True])
+    """
+    return np.asarray((error <= END_RTOL * np.abs(factor) + END_ATOL) | np.isnan(factor))

@@ -7,7 +7,8 @@ import numpy as np
 from ssaudit.margins.crossing_accuracy import factor_error, on_axis, response_error
 from ssaudit.margins.crossings import find_crossings, spread_widely
 from ssaudit.margins.gain_checks import term_sizes
-from ssaudit.margins.stability_radius import finite_points
+from ssaudit.margins.responses import respond, response_noise
+from ssaudit.margins.state_matrices import finite_points
 from ssaudit.margins.state_space import (
     Bool,
     Complex,
@@ -15,8 +16,6 @@ from ssaudit.margins.state_space import (
     Real,
     StateSpace,
     feed_back,
-    respond,
-    response_noise,
     to_continuous,
     unwarp,
 )
@@ -51,7 +50,7 @@ class GainCrossings:
         Most poles that may cross there: two where a pair does, one at either end of the axis,
         more where crossings coincide.
     mapped : (points, any) float
-        The frequency as it is in ``closed`` (see `to_continuous`).
+        The frequency as it is in ``closed`` (see `ssaudit.margins.state_space.to_continuous`).
     base : (points,) float
         The factor at which the loop was closed to find them.
     closed, given : StateSpace

@@ -1,4 +1,4 @@
-"""Stable ranges of one gain factor on a loop, or on all its channels together."""
+"""The stable range around 1 of one gain factor on a loop, or on all its channels together."""
 
 from dataclasses import dataclass
 
@@ -8,29 +8,21 @@ from numpy.typing import ArrayLike
 from ssaudit.margins.balance import balance_loop
 from ssaudit.margins.gain_checks import (
     DROWNING,
+    END_ATOL,
+    END_RTOL,
     FAR_OUT,
     FARTHEST,
-    between,
     between_outside,
+    changes_fit,
     count_right,
+    is_small,
     may_be_stable,
-    never_stable,
 )
-from ssaudit.margins.gain_crossings import (
-    HIDDEN_FACTOR,
-    GainCrossings,
-    locate_crossings,
-)
-from ssaudit.margins.state_space import Bool, Index, Real, StateSpace, read_loop
+from ssaudit.margins.gain_crossings import HIDDEN_FACTOR, GainCrossings, locate_crossings
+from ssaudit.margins.state_space import Bool, Real, StateSpace, read_loop
 
-# Ends are confirmed where rounding moves them by no more than this, relative or absolute.
-END_RTOL = 1e-6
-END_ATOL = 1e-9
 # Where poles spread widely, they are looked at these parts of the way to an end too.
 PROBES = np.array([1e-4, 1e-3, 0.01, 0.1, 0.8, 0.9, 0.97, 0.99, 0.999, 1 - 1e-5, 1 - 1e-6])
-# Of several channels nothing but counts shows crossings that were missed: there they are taken
-# these parts of an interval from its ends too.
-FROM_ENDS = np.array([1e-6, 1e-5, 1e-3])
 # Where 1 is (nearly) a crossing itself, the nominal loop is on the boundary.
 AT_ONE = 1e-12
 
@@ -42,7 +34,8 @@ class GainRange:
     Attributes
     ----------
     low, high : (points,) float
-        Its ends: -inf and inf where there is none; NaN where the loop is not stable at 1.
+        Its ends: -inf and inf where there is none, as far as `find_gain_range` tells; NaN where the
+        loop is not stable at 1 or not confirmed.
     low_frequency, high_frequency : (points,) float
         Where a pole meets the boundary at the end [rad/s]; inf where the loop becomes
         ill-posed (of sampled loops π/dt is half the sampling rate); NaN where no end is.
@@ -58,27 +51,6 @@ class GainRange:
     low_frequency: Real
     high_frequency: Real
     stable: Bool
-    confirmed: Bool
-
-
-@dataclass(frozen=True)
-class StableGains:
-    """All stable intervals of the gain factor.
-
-    Attributes
-    ----------
-    low, high : (points, intervals) float
-        Ends in rising order, NaN-padded; a point with NaN alone is stable at no factor.
-    low_frequency, high_frequency : (points, intervals) float
-        Where a pole meets the boundary [rad/s], as in `GainRange`.
-    confirmed : (points,) bool
-        False where the numbers do not decide, or the model is too large.
-    """
-
-    low: Real
-    high: Real
-    low_frequency: Real
-    high_frequency: Real
     confirmed: Bool
 
 
@@ -119,159 +91,6 @@ def find_gain_range(
     loop = balance_loop(read_loop(A, B, C, D))
     crossings = locate_crossings(loop, dt)
     return range_around_one(loop, crossings, dt)
-
-
-def find_stable_gains(
-    A: ArrayLike, B: ArrayLike, C: ArrayLike, D: ArrayLike, dt: float = 0.0
-) -> StableGains:
-    """All intervals of one factor on the loop in which it is stable, be it stable at 1 or not.
-
-    Parameters
-    ----------
-    A, B, C, D, dt
-        As in `find_gain_range`.
-
-    Returns
-    -------
-    StableGains
-
-    Examples
-    --------
-    L = 1/(s - 2) is stable for factors above 2, and so lost at 1.
-
-    >>> one = np.ones((1, 1, 1))
-    >>> gains = find_stable_gains(2 * one, one, one, 0 * one)
-    >>> gains.low.round(9), gains.high
-    (array([[2.]]), array([[inf]]))
-    """
-    loop = balance_loop(read_loop(A, B, C, D))
-    crossings = locate_crossings(loop, dt)
-    points = len(loop)
-    pad = np.full((points, 1), np.inf)
-    factor = np.where(np.isnan(crossings.factor), np.inf, crossings.factor)
-    factor = np.concatenate([-pad, factor, pad], axis=1)
-    nowhere = np.full((points, 1), np.nan)
-    frequency = np.concatenate([nowhere, crossings.frequency, nowhere], axis=1)
-    owner, column = np.nonzero(factor[:, 1:] > factor[:, :-1])
-    least, most = _count_between(loop, owner, factor[owner, column], factor[owner, column + 1], dt)
-    confirmed = ~crossings.failed & _counts_agree(loop, crossings, owner, column, least, most)
-    stable = most == 0
-    owner, column = owner[stable], column[stable]
-    for side in (0, 1):
-        confirmed &= _ends_certain(crossings, owner, column - 1 + side)
-    confirmed &= _doubts_are_known(crossings)
-    place = np.arange(len(owner)) - np.searchsorted(owner, owner)
-    width = int(place.max(initial=0)) + 1
-    ends = np.full((4, points, width), np.nan)
-    ends[0, owner, place], ends[1, owner, place] = factor[owner, column], factor[owner, column + 1]
-    ends[2, owner, place] = frequency[owner, column]
-    ends[3, owner, place] = frequency[owner, column + 1]
-    never = never_stable(loop, dt)
-    ends[:, ~confirmed | never] = np.nan
-    confirmed |= never
-    return StableGains(ends[0], ends[1], ends[2], ends[3], confirmed)
-
-
-def _count_between(
-    loop: StateSpace, owner: Index, low: Real, high: Real, dt: float
-) -> tuple[Index, Index]:
-    """Poles outside the region of stability in intervals without a crossing; farther ones too."""
-    least, most = count_right(loop, owner, between(low, high), dt)
-    for side, endless in ((-1, np.isinf(low)), (1, np.isinf(high))):
-        for factor in FARTHEST:
-            known = low if side > 0 else -high
-            beyond = np.nonzero(endless & (known < factor))[0]
-            far = np.full(len(beyond), side * factor)
-            less, more = count_right(loop, owner[beyond], far, dt, far=factor > DROWNING)
-            other = (less > most[beyond]) | (more < least[beyond])
-            if loop.D.shape[-1] > 1 and factor <= DROWNING:
-                other |= (most[beyond] == 0) & (more > 0)
-            least[beyond[other]] = -1
-    if loop.D.shape[-1] > 1:
-        least[~_alike_near_ends(loop, owner, low, high, least, most, dt)] = -1
-    return least, most
-
-
-def _alike_near_ends(
-    loop: StateSpace, owner: Index, low: Real, high: Real, least: Index, most: Index, dt: float
-) -> Bool:
-    """Whether counts just inside both ends of intervals may be the same as in the middle."""
-    alike = np.ones(len(owner), dtype=bool)
-    inside = between(low, high)
-    for end in (low, high):
-        chosen = np.nonzero(np.isfinite(end))[0]
-        for part in FROM_ENDS:
-            width = np.minimum(np.abs(inside - end), 1 + np.abs(end))[chosen]
-            factor = end[chosen] + np.sign(inside - end)[chosen] * part * width
-            less, more = count_right(loop, owner[chosen], factor, dt)
-            alike[chosen] &= (less <= most[chosen]) & (more >= least[chosen])
-    return alike
-
-
-def _counts_agree(
-    loop: StateSpace,
-    crossings: GainCrossings,
-    owner: Index,
-    column: Index,
-    least: Index,
-    most: Index,
-) -> Bool:
-    """Whether the poles counted in all intervals differ by those that cross between them."""
-    agreed = np.ones(len(loop), dtype=bool)
-    # Neither stable nor not, or other than at another factor of the same interval.
-    agreed[owner[((least == 0) & (most > 0)) | (least < 0)]] = False
-    left = np.nonzero(owner[1:] == owner[:-1])[0]
-    own, at = owner[left], column[left]
-    _, change, several = crossings.examine(own, at)
-    below, above = (least[left], most[left]), (least[left + 1], most[left + 1])
-    agreed[own[~_changes_fit(change, several, crossings.jump[own, at], below, above)]] = False
-    return agreed
-
-
-def _changes_fit(
-    change: Index,
-    several: Bool,
-    jump: Real,
-    below: tuple[Index, Index],
-    above: tuple[Index, Index],
-) -> Bool:
-    """Whether counts of unstable poles on both sides of crossings fit what crosses there.
-
-    Where the direction is not known it may be either; where crossings coincide, any number up to
-    their sum may cross.
-    """
-    smallest, largest = above[0] - below[1], above[1] - below[0]
-
-    def may_be(wanted: Real | Index) -> Bool:
-        return np.asarray((smallest <= wanted) & (wanted <= largest))
-
-    single = np.where(change != 0, may_be(change), may_be(jump) | may_be(-jump))
-    return np.where(several, (smallest <= jump) & (largest >= -jump), single)
-
-
-def _ends_certain(crossings: GainCrossings, owner: Index, column: Index) -> Bool:
-    """Whether rounding leaves the given ends where they are; columns off the table are no ends."""
-    certain = np.ones(len(crossings.failed), dtype=bool)
-    there = np.nonzero((column >= 0) & (column < crossings.factor.shape[1]))[0]
-    owner, column = owner[there], column[there]
-    error, _, _ = crossings.examine(owner, column)
-    certain[owner[~_is_small(error, crossings.factor[owner, column])]] = False
-    return certain
-
-
-def _is_small(error: Real, factor: Real) -> Bool:
-    """Whether errors of factors are within the stated accuracy, or there is no factor."""
-    return np.asarray((error <= END_RTOL * np.abs(factor) + END_ATOL) | np.isnan(factor))
-
-
-def _doubts_are_known(crossings: GainCrossings) -> Bool:
-    """Whether what rounding hides could only be at factors at which a crossing is known."""
-    doubtful = crossings.doubtful
-    slack = END_RTOL * np.abs(doubtful) + END_ATOL
-    distance = np.abs(doubtful[:, :, None] - crossings.factor[:, None, :])
-    with np.errstate(invalid="ignore"):
-        known = (distance <= slack[:, :, None]).any(axis=2)
-    return np.asarray((known | ~(np.abs(doubtful) < HIDDEN_FACTOR)).all(axis=1))
 
 
 def _is_doubtful(crossings: GainCrossings, low: Real, high: Real) -> Bool:
@@ -345,8 +164,8 @@ def _end_on_side(
     outer = count_right(loop, points, outside, dt)
     error, change, several = crossings.examine(points, column)
     none = np.zeros(len(loop), dtype=np.intp)
-    fits = _changes_fit(side * change, several, jump, (none, none), outer)
-    certain = _is_small(error, np.where(endless, np.nan, end))
+    fits = changes_fit(side * change, several, jump, (none, none), outer)
+    certain = is_small(error, np.where(endless, np.nan, end))
     return end, frequency, inner & (endless | (fits & certain))
 
 

@@ -21,7 +21,8 @@ from ssaudit.margins.delayed import (
 from ssaudit.margins.gain_checks import between_outside
 from ssaudit.margins.gain_crossings import locate_crossings
 from ssaudit.margins.gain_range import range_around_one
-from ssaudit.margins.stability_radius import find_stable
+from ssaudit.margins.responses import respond
+from ssaudit.margins.state_matrices import find_stable
 from ssaudit.margins.state_space import (
     Bool,
     Index,
@@ -29,7 +30,6 @@ from ssaudit.margins.state_space import (
     StateSpace,
     feed_back,
     read_loop,
-    respond,
     to_continuous,
     unwarp,
 )
@@ -45,7 +45,8 @@ class LoopMargins:
     Attributes
     ----------
     gain_low, gain_high : (points,) float
-        The gain may fall to, and rise to, these factors: 0 and inf where there is no limit.
+        The gain may fall to, and rise to, these factors: 0 and inf where there is no limit, at
+        least none below 1e9 (180 dB), or 1000 (60 dB) of loops with a transport delay.
     gain_low_db, gain_high_db : (points,) float
         The same in decibel: -inf and inf where there is no limit.
     gain_low_frequency, gain_high_frequency : (points,) float

@@ -1,21 +1,13 @@
-"""Smallest real perturbation of A that loses stability, and the perturbation itself."""
-
-from dataclasses import dataclass
+"""Smallest real perturbation of A that loses stability."""
 
 import numpy as np
 from numpy.typing import ArrayLike
 
 from ssaudit.margins.peak_search import find_peak, near_axis
-from ssaudit.margins.stability_radius import (
-    StabilityRadius,
-    boundary_frequencies,
-    find_stable,
-    finite_points,
-    join,
-    read_models,
-    scale_models,
-)
-from ssaudit.margins.state_space import Bool, Index, Real
+from ssaudit.margins.resolvent import boundary_frequencies
+from ssaudit.margins.stability_radius import StabilityRadius
+from ssaudit.margins.state_matrices import find_stable, finite_points, read_models, scale_models
+from ssaudit.margins.state_space import Bool, Index, Real, join
 from ssaudit.modes.poles import find_poles, isolate
 
 # Stated accuracy of the radius: no frequency has a value smaller than (1 - REAL_RTOL) of it.
@@ -31,20 +23,7 @@ ROUGH_STEPS = 14
 GOLDEN = (np.sqrt(5) - 1) / 2
 
 
-@dataclass(frozen=True)
-class RealRadius(StabilityRadius):
-    """As `StabilityRadius`, for real perturbations.
-
-    Attributes
-    ----------
-    multiplier : (points,) float
-        The γ in (0, 1] that attains the value at ``frequency``.
-    """
-
-    multiplier: Real
-
-
-def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> RealRadius:
+def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> StabilityRadius:
     """Smallest real perturbation of A that puts a pole on the boundary.
 
     Parameters
@@ -58,9 +37,11 @@ def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> 
 
     Returns
     -------
-    RealRadius
-        Within a relative tolerance of 1e-6 from above. Models of more than 40 states get NaN and
-        are not confirmed.
+    StabilityRadius
+        The radius within a relative tolerance of 1e-6 from above, as long as poles lie within five
+        decades. What rounding hides beyond is not examined: of 400 models over ten decades 13 had a
+        radius too large by more than that, at most by 1e-3. Models of more than 40 states get NaN
+        and are not confirmed.
 
     References
     ----------
@@ -77,7 +58,7 @@ def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> 
     models = scale_models(models) if scaled else models
     poles, stable = find_stable(models, dt)
     radius = np.full(len(models), np.nan)
-    frequency, multiplier = radius.copy(), radius.copy()
+    frequency = radius.copy()
     confirmed = finite_points(models)
     chosen = np.nonzero(stable)[0]
     if models.shape[-1] > MOST_STATES:
@@ -90,10 +71,7 @@ def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> 
         peak = find_peak(curve, starts, upper, upper / 2, REAL_RTOL)
         radius[chosen], confirmed[chosen] = 1 / peak.value, peak.confirmed
         frequency[chosen] = peak.frequency / (dt or 1.0)
-        everyone, floor = np.arange(len(chosen)), np.zeros(len(chosen))
-        _, gamma = curve.tune(everyone, np.nan_to_num(peak.frequency), floor)
-        multiplier[chosen] = np.where(peak.confirmed, gamma[:, 0], np.nan)
-    return RealRadius(radius, frequency, stable, confirmed, multiplier)
+    return StabilityRadius(radius, frequency, stable, confirmed)
 
 
 class RealCurve:
@@ -101,6 +79,23 @@ class RealCurve:
 
     P_γ(X) = [[Re X, -γ Im X], [Im X / γ, Re X]] with γ in (0, 1]; ν is the size of the smallest
     real perturbation that puts a pole at s. Any γ gives a lower bound of ν.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+    dt : float
+        Sampling time [s]; 0 means continuous. Frequencies are in rad/s, of sampled models angles
+        in rad.
+
+    References
+    ----------
+    Qiu, Bernhardsson, Rantzer, Davison, Young and Doyle, Automatica 31(6), 1995.
+
+    Examples
+    --------
+    >>> curve = RealCurve(np.array([[[-2.0]]]), 0.0)
+    >>> curve.hold(np.array([0]), np.zeros(1), np.ones((1, 1)))
+    array([0.5])
     """
 
     tunable = True
@@ -224,57 +219,3 @@ def quarter_turn(n: int, gamma: Real) -> Real:
     nothing = np.zeros((len(gamma), n, n))
     column = gamma[:, None, None]
     return join(nothing, -column * identity, identity / column, nothing)
-
-
-def attain_real_radius(A: ArrayLike, found: RealRadius, dt: float = 0.0) -> Real:
-    """Build a real perturbation of A, as large as the radius, that puts a pole on the boundary.
-
-    Parameters
-    ----------
-    A : (points, n, n) float
-        The matrices whose radius was found (balanced ones if it was a scaled radius).
-    found : RealRadius
-        What `find_real_radius` gave for them.
-    dt : float
-        Sampling time [s]; 0 means continuous.
-
-    Returns
-    -------
-    (points, n, n) float
-        Of rank one or two; NaN where there is no radius. Its norm may exceed the radius a little
-        where the singular value is a double one.
-
-    References
-    ----------
-    Qiu et al., Automatica 31(6), 1995 (construction from the singular vectors at the best γ).
-
-    Examples
-    --------
-    >>> A = np.array([[[-1.0, 2.0], [-2.0, -1.0]]])
-    >>> abs(attain_real_radius(A, find_real_radius(A))).round(5)
-    array([[[1., 0.],
-            [0., 1.]]])
-    """
-    models = read_models(A)
-    n = models.shape[-1]
-    w = found.frequency * (dt or 1.0)
-    everyone = np.arange(len(models))
-    blocks = RealCurve(models, dt).blocks(everyone, w, found.multiplier)
-    (U, sigma, V), _ = isolate(lambda M: tuple(np.linalg.svd(M)), blocks)
-    u, v = U[:, :, -2], V[:, -2, :]
-    left = np.stack([u[:, :n], u[:, n:]], axis=2)
-    right = np.stack([v[:, :n], v[:, n:]], axis=2)
-    flat = (w == 0) | (w == np.pi if dt else False)
-    left[flat, :, :], right[flat, :, :] = _real_pair(models[flat], w[flat], dt)
-    (inverse,), _ = isolate(lambda M: (np.linalg.pinv(M, rcond=1e-9),), right)
-    return np.asarray(sigma[:, -2, None, None] * left @ inverse)
-
-
-def _real_pair(A: Real, w: Real, dt: float) -> tuple[Real, Real]:
-    """Singular vectors of the least singular value at a real pole, with a zero column beside."""
-    real = np.cos(w) if dt else np.zeros(len(w))
-    state = real[:, None, None] * np.eye(A.shape[-1]) - A
-    (U, _, V), _ = isolate(lambda M: tuple(np.linalg.svd(M)), state) if len(A) else ((A, A, A), A)
-    nothing = np.zeros((*A.shape[:2], 1))
-    left = np.concatenate([U[:, :, -1:], nothing], axis=2)
-    return left, np.concatenate([V[:, -1:, :].swapaxes(1, 2), nothing], axis=2)

@@ -145,14 +145,14 @@ def _search_newton(M: Complex, logs: Real, power: float) -> tuple[Real, Real, Re
     The third result is where the stand-in is smallest, a place to begin with a closer one.
     """
     x, damping = logs.copy(), np.full(len(M), 1e-3)
-    value, norm, slope, bend = _smooth_norm(M, x, power)
+    value, norm, slope, bend = smooth_norm(M, x, power)
     best, best_x = norm, x.copy()
     for _ in range(NEWTON_STEPS):
         damped = bend[:, 1:, 1:] + damping[:, None, None] * np.eye(x.shape[1] - 1)
         (step,), _ = isolate(lambda H, g: (np.linalg.solve(H, g),), damped, -slope[:, 1:, None])
         trial = x.copy()
         trial[:, 1:] += np.clip(np.where(np.isnan(step), 0.0, step)[:, :, 0], -2.0, 2.0)
-        found = _smooth_norm(M, trial, power)
+        found = smooth_norm(M, trial, power)
         lower = found[1] < best
         best, best_x = np.where(lower, found[1], best), np.where(lower[:, None], trial, best_x)
         better = found[0] < value
@@ -163,8 +163,36 @@ def _search_newton(M: Complex, logs: Real, power: float) -> tuple[Real, Real, Re
     return best, best_x, x
 
 
-def _smooth_norm(M: Complex, x: Real, power: float) -> tuple[Real, Real, Real, Real]:
-    """Log of tr((M* M)^p)^(1/2p) for the scaled M, its norm, and the log's two derivatives."""
+def smooth_norm(M: Complex, x: Real, power: float) -> tuple[Real, Real, Real, Real]:
+    """Log of tr((M* M)^p)^(1/2p) for the scaled M, its norm, and the log's two derivatives.
+
+    Parameters
+    ----------
+    M : (count, m, m) complex
+    x : (count, m) float
+        Logarithms of the scales, as in `norm_of_scaled`.
+    power : float
+        The p; the larger, the nearer to the norm.
+
+    Returns
+    -------
+    value : (count,) float
+        The log; inf where M has no singular value decomposition.
+    norm : (count,) float
+    slope : (count, m) float
+    bend : (count, m, m) float
+
+    References
+    ----------
+    Derivatives of tr H^p by divided differences: Daleckii and Krein (from memory).
+
+    Examples
+    --------
+    >>> M = np.array([[[0, 4.0], [1.0, 0]]]) + 0j
+    >>> value, norm, slope, _ = smooth_norm(M, np.log([[1.0, 2.0]]), 2.0)  # sizes 2 and 2
+    >>> np.exp(4 * value).round(9), norm.round(9), bool(np.abs(slope).max() < 1e-12)
+    (array([32.]), array([2.]), True)
+    """
     scaled = M * np.exp(x[:, :, None] - x[:, None, :])
     (U, sigma, V), failed = isolate(lambda stack: tuple(np.linalg.svd(stack)), scaled)
     with np.errstate(all="ignore"):

@@ -1,4 +1,4 @@
-"""Stacks of loops in state space: checking, closing, mapping and evaluating them."""
+"""Stacks of loops in state space: checking, closing and mapping them."""
 
 from dataclasses import dataclass
 
@@ -6,20 +6,12 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from ssaudit.errors import LoopError
-from ssaudit.modes.poles import find_modes, isolate
+from ssaudit.modes.poles import isolate
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Bool = NDArray[np.bool_]
 Index = NDArray[np.intp]
-
-# Sums of a few dozen terms, each exact to 1e-16, are trusted to this.
-RESPONSE_ROUNDING = 1e-14
-# One rounding, with room for the few operations that each product of complex numbers goes through;
-# sums of n terms add up to sqrt(n) of them (Higham and Mary, SIAM J. Sci. Comput. 41(5), 2019).
-UNIT = 4 * np.finfo(float).eps
-# Errors of a modal form are followed to first order: beyond this they are not followed at all.
-FIRST_ORDER = 0.05
 
 
 @dataclass(frozen=True)
@@ -217,247 +209,6 @@ def unwarp(w: Real, dt: float) -> Real:
     return w if dt == 0 else 2 / dt * np.arctan(w)
 
 
-def respond(system: StateSpace, owner: Index, w: Real) -> Complex:
-    """Frequency response at a flat list of frequencies, each of its own point.
-
-    Parameters
-    ----------
-    system : StateSpace
-    owner : (count,) int
-        The point each frequency belongs to.
-    w : (count,) float
-        Frequency [rad/s]; inf gives D.
-
-    Returns
-    -------
-    (count, outputs, inputs) complex
-        NaN where the frequency is a pole to working precision.
-
-    Examples
-    --------
-    >>> system = read_loop([[[-1.0]]], [[[1.0]]], [[[2.0]]], [[[0.5]]])
-    >>> respond(system, np.array([0, 0]), np.array([0.0, np.inf])).ravel()
-    array([2.5+0.j, 0.5+0.j])
-    """
-    response, _ = respond_with_slope(system, owner, w, slope=False)
-    return response
-
-
-def respond_with_slope(
-    system: StateSpace, owner: Index, w: Real, *, slope: bool = True
-) -> tuple[Complex, Complex]:
-    """Frequency response and its derivative with respect to frequency.
-
-    Parameters
-    ----------
-    system : StateSpace
-    owner : (count,) int
-        The point each frequency belongs to.
-    w : (count,) float
-        Frequency [rad/s]; inf gives D and a zero slope.
-    slope : bool
-        Without it the second result is the response again, at half the cost.
-
-    Returns
-    -------
-    response, derivative : (count, outputs, inputs) complex
-
-    Examples
-    --------
-    >>> system = read_loop([[[-1.0]]], [[[1.0]]], [[[2.0]]], [[[0.5]]])
-    >>> _, derivative = respond_with_slope(system, np.array([0]), np.array([0.0]))
-    >>> derivative.ravel()
-    array([0.-2.j])
-    """
-    D = system.D[owner].astype(complex)
-    n = system.A.shape[-1]
-    if n == 0 or len(owner) == 0:
-        return D, np.zeros_like(D) if slope else D
-    far = np.isinf(w)
-    state, resolved = _resolve(system.A, owner, np.where(far, 0.0, w), system.B[owner])
-    resolved[far] = 0
-    C = system.C[owner]
-    response = D + C @ resolved
-    if not slope:
-        return response, response
-    (twice,), _ = isolate(lambda M, X: (np.linalg.solve(M, X),), state, resolved)
-    return response, np.asarray(-1j * (C @ twice), dtype=complex)
-
-
-def response_noise(system: StateSpace, owner: Index, w: Real) -> Real:
-    """Size below which a frequency response is rounding: that of its terms times 1e-14.
-
-    Parameters
-    ----------
-    system : StateSpace
-    owner : (count,) int
-        The point each frequency belongs to.
-    w : (count,) float
-        Frequency [rad/s]; inf gives that of D.
-
-    Returns
-    -------
-    (count,) float
-
-    Examples
-    --------
-    >>> system = read_loop([[[-1.0]]], [[[1.0]]], [[[2.0]]], [[[-2.0]]])
-    >>> float(response_noise(system, np.array([0]), np.array([0.0]))[0])
-    4e-14
-    """
-    size = np.linalg.norm(system.D[owner], axis=(1, 2))
-    if system.A.shape[-1] and len(owner):
-        _, resolved = _resolve(system.A, owner, np.where(np.isinf(w), 0.0, w), system.B[owner])
-        terms = np.linalg.norm(system.C[owner], axis=(1, 2)) * np.linalg.norm(resolved, axis=(1, 2))
-        size = size + np.where(np.isinf(w), 0.0, terms)
-    return np.asarray(RESPONSE_ROUNDING * size)
-
-
-@dataclass(frozen=True)
-class ModalForm:
-    """A response as a sum over its poles, D + Σ left_k right_k / (jw - pole_k), and its error.
-
-    Attributes
-    ----------
-    poles : (points, n) complex
-    left : (points, outputs, n) complex
-    right : (points, n, inputs) complex
-    D : (points, outputs, inputs) float
-    doubt : (points, n) float
-    floor : (points,) float
-        The response is within floor + Σ doubt_k / abs(jw - pole_k) of the sum; inf where the form
-        says nothing, because the eigenvectors depend on each other.
-    condition : (points, n) float
-        Of each pole: length of its left eigenvector, its right one of about unit length.
-    """
-
-    poles: Complex
-    left: Complex
-    right: Complex
-    D: Real
-    doubt: Real
-    floor: Real
-    condition: Real
-
-    def __getitem__(self, chosen: Index | Bool | slice) -> "ModalForm":
-        """Take the chosen points only."""
-        return ModalForm(*(column[chosen] for column in vars(self).values()))
-
-    def __len__(self) -> int:
-        """Count the points."""
-        return len(self.poles)
-
-
-def to_modes(
-    system: StateSpace, carried: Real | float = 0.0, *, sampled: bool = False, steps: int = 0
-) -> ModalForm:
-    """Write responses as sums over their poles, and bound what rounding does to them.
-
-    Sampled ones are mapped as by `to_continuous`, pole by pole, which no inverse spoils. Of these
-    A - I is to be given: of poles sampled fast all digits but a few go into the 1.
-
-    Parameters
-    ----------
-    system : StateSpace
-        Stable systems, best with balanced states; sampled ones with A less the identity.
-    carried : (points, n, n) float
-        Absolute size of the terms that each entry of A was summed from, whose rounding it
-        carries; 0 where A is as given.
-    sampled : bool
-        Whether the systems are sampled ones.
-    steps : int
-        Corrections of the eigenvectors. Without them slow poles beside fast ones are as far off
-        as the rounding of the fast ones; one or two bring down what can be brought down.
-
-    Returns
-    -------
-    ModalForm
-
-    References
-    ----------
-    First-order perturbation of an eigendecomposition, and its correction by it: Golub and Van
-    Loan, Matrix Computations, 4th ed. (2013), section 7.2 (from memory).
-
-    Examples
-    --------
-    >>> form = to_modes(read_loop([[[-1.0]]], [[[1.0]]], [[[2.0]]], [[[0.5]]]))
-    >>> form.poles.real, (form.left * form.right).real, bool(form.doubt[0, 0] < 1e-13)
-    (array([[-1.]]), array([[[2.]]]), True)
-    """
-    # What overflows on the way is in doubt without end.
-    with np.errstate(all="ignore"):
-        return _find_modal_form(system, carried, sampled, steps)
-
-
-def _find_modal_form(
-    system: StateSpace, carried: Real | float, sampled: bool, steps: int
-) -> ModalForm:
-    A = system.A
-    poles, V, W, _ = find_modes(A)
-    F = W @ (A @ V)
-    for _ in range(steps):
-        between = poles[:, np.newaxis, :] - poles[:, :, np.newaxis]
-        correction = np.where(between == 0, 0, F / np.where(between == 0, 1, between))
-        V = V + V @ correction
-        W = _invert_complex(V)
-        F = W @ (A @ V)
-        # Real ones stay real, and the upper of a pair stays above.
-        moved = np.diagonal(F, axis1=1, axis2=2)
-        poles = moved.real + 1j * np.sign(poles.imag) * np.abs(moved.imag)
-    depth = -poles.real
-    if sampled:  # 1 - abs(1 + q), written so that it does not cancel
-        depth = (2 * depth - np.square(np.abs(poles))) / (1 + np.abs(1 + poles))
-    left, right = system.C @ V, W @ system.B
-    doubt = _doubt_of(system, poles, depth, np.abs(A) + carried, V, W, F)
-    condition = np.linalg.norm(V, axis=1) * np.linalg.norm(W, axis=2)
-    form = ModalForm(poles, left, right, system.D, doubt, np.zeros(len(poles)), condition)
-    return _map_modes(form) if sampled else form
-
-
-def _invert_complex(matrices: Complex) -> Complex:
-    """Inverse of each complex matrix, NaN where it is singular or not finite."""
-    (inverse,), _ = isolate(lambda stack: (np.linalg.inv(stack),), matrices)
-    return np.asarray(inverse)
-
-
-def _doubt_of(
-    system: StateSpace, p: Complex, depth: Real, size: Real, V: Complex, W: Complex, F: Complex
-) -> Real:
-    """Bound the error of a modal form from what is left off the diagonal, and all rounding.
-
-    With E the error of the diagonal form, c_k E_kl b_l / ((s - p_k)(s - p_l)) is at most
-    c_k E_kl b_l (1/abs(s - p_k) + 1/abs(s - p_l)) / (abs(s - p_k) + abs(s - p_l)), and the last
-    sum is no less than the distance of both poles, or of both from the boundary.
-    """
-    rounding = np.sqrt(p.shape[1]) * UNIT
-    identity, sizes_V, sizes_W = np.eye(p.shape[1]), np.abs(V), np.abs(W)
-    inverse = np.abs(W @ V - identity) + rounding * (sizes_W @ sizes_V)
-    off = np.abs(F - p[:, np.newaxis, :] * identity) + rounding * (sizes_W @ (size @ sizes_V))
-    apart = np.abs(p[:, :, np.newaxis] - p[:, np.newaxis, :])
-    apart = np.maximum(apart, depth[:, :, np.newaxis] + depth[:, np.newaxis, :])
-    mixed = (off + inverse * np.abs(p)[:, np.newaxis, :]) / apart
-    c, b = np.linalg.norm(system.C @ V, axis=1), np.linalg.norm(W @ system.B, axis=2)
-    c_sum = np.linalg.norm(np.abs(system.C) @ sizes_V, axis=1)
-    b_sum = np.linalg.norm(sizes_W @ np.abs(system.B), axis=2)
-    doubt = c * np.einsum("pkl,pl->pk", mixed + inverse, b)
-    doubt += b * np.einsum("plk,pl->pk", mixed, c) + rounding * (c_sum * b + c * b_sum)
-    followed = (mixed.sum(axis=(1, 2)) + inverse.sum(axis=(1, 2)) < FIRST_ORDER)[:, np.newaxis]
-    # Terms of second order are no more than the first times what is followed.
-    followed = followed & (depth > 0) & np.isfinite(doubt)
-    return np.where(followed, (1 + 4 * FIRST_ORDER) * doubt, np.inf)
-
-
-def _map_modes(form: ModalForm) -> ModalForm:
-    """Map z = 1 + q = (1 + s)/(1 - s): 1/(z - p) = ((1 - s)/(1 + p)) / (s - (p - 1)/(p + 1))."""
-    beside = 2 + form.poles
-    left = np.sqrt(2) * form.left / beside[:, np.newaxis, :]
-    right = np.sqrt(2) * form.right / beside[:, :, np.newaxis]
-    D = form.D - (form.left @ (form.right / beside[:, :, np.newaxis])).real
-    floor = (form.doubt / np.abs(beside)).sum(axis=1)
-    doubt = 2 * form.doubt / np.square(np.abs(beside))
-    return ModalForm(form.poles / beside, left, right, D, doubt, floor, form.condition)
-
-
 def typical_frequency(poles: Complex) -> Real:
     """Geometric mean of the natural frequencies, those at zero left out; 1 where none is left.
 
@@ -480,10 +231,75 @@ def typical_frequency(poles: Complex) -> Real:
     return np.asarray(np.exp(total / np.maximum(counted.sum(axis=1), 1)))
 
 
-def _resolve(A: Real, owner: Index, w: Real, B: Real) -> tuple[Complex, Complex]:
-    """JwI - A, and its inverse times B."""
-    state = -A[owner].astype(complex)
-    diagonal = np.arange(A.shape[-1])
-    state[:, diagonal, diagonal] += 1j * w[:, None]
-    (resolved,), _ = isolate(lambda M, X: (np.linalg.solve(M, X),), state, B.astype(complex))
-    return state, np.array(resolved)
+def given_form(system: StateSpace, dt: float) -> StateSpace:
+    """Add the identity back to A of sampled systems that are without.
+
+    Parameters
+    ----------
+    system : StateSpace
+        As `less_identity` returns it.
+    dt : float
+        Sampling time [s]; 0 means continuous.
+
+    Returns
+    -------
+    StateSpace
+
+    Examples
+    --------
+    >>> system = read_loop([[[-0.5]]], [[[1.0]]], [[[1.0]]], [[[0.0]]])
+    >>> given_form(system, 0.1).A.item(), given_form(system, 0.0).A.item()
+    (0.5, -0.5)
+    """
+    return StateSpace(system.A + _identity(system, dt), system.B, system.C, system.D)
+
+
+def less_identity(system: StateSpace, dt: float) -> StateSpace:
+    """Take the identity from A of sampled systems: poles next to 1 then keep their digits.
+
+    Parameters
+    ----------
+    system : StateSpace
+    dt : float
+        Sampling time [s]; 0 means continuous, and nothing is taken.
+
+    Returns
+    -------
+    StateSpace
+
+    Examples
+    --------
+    >>> system = read_loop([[[0.5]]], [[[1.0]]], [[[1.0]]], [[[0.0]]])
+    >>> less_identity(system, 0.1).A.item(), less_identity(system, 0.0).A.item()
+    (-0.5, 0.5)
+    """
+    return StateSpace(system.A - _identity(system, dt), system.B, system.C, system.D)
+
+
+def _identity(system: StateSpace, dt: float) -> Real:
+    """Return the identity of sampled systems, zero of continuous ones."""
+    n = system.A.shape[-1]
+    return np.eye(n) if dt > 0 else np.zeros((n, n))
+
+
+def join(a: Real, b: Real, c: Real, d: Real) -> Real:
+    """Stack four blocks into [[a, b], [c, d]] at each point.
+
+    Parameters
+    ----------
+    a, b, c, d : (points, rows, columns) float
+
+    Returns
+    -------
+    (points, rows, columns) float
+
+    Examples
+    --------
+    >>> one = np.ones((1, 1, 1))
+    >>> join(one, 2 * one, 3 * one, 4 * one)
+    array([[[1., 2.],
+            [3., 4.]]])
+    """
+    upper = np.concatenate([a, b], axis=2)
+    lower = np.concatenate([c, d], axis=2)
+    return np.concatenate([upper, lower], axis=1)

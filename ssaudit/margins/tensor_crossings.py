@@ -7,13 +7,8 @@ operator, this is an ordinary eigenproblem of size (channels × states) for 1/κ
 
 import numpy as np
 
-from ssaudit.margins.state_space import (
-    Index,
-    Real,
-    StateSpace,
-    feed_back,
-    respond_with_slope,
-)
+from ssaudit.margins.responses import respond_with_slope
+from ssaudit.margins.state_space import Index, Real, StateSpace, feed_back
 from ssaudit.modes.poles import find_poles, isolate
 
 # The Lyapunov operator has n (n + 1)/2 rows: 820 for 40 states, 60 ms and 5 MB a point.

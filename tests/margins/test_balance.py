@@ -1,7 +1,8 @@
 import numpy as np
 
 from ssaudit.margins.balance import balance_loop, balance_states
-from ssaudit.margins.state_space import read_loop, respond
+from ssaudit.margins.responses import respond
+from ssaudit.margins.state_space import read_loop
 
 
 def test_balanced_rows_and_columns_are_equal():

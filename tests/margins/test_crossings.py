@@ -3,7 +3,8 @@ import numpy as np
 import pytest
 
 from ssaudit.margins.crossings import drop_doubles, find_crossings
-from ssaudit.margins.state_space import read_loop, respond
+from ssaudit.margins.responses import respond
+from ssaudit.margins.state_space import read_loop
 from ssaudit.modes.poles import find_poles
 
 

@@ -7,7 +7,8 @@ import pytest
 from sympy import ZZ, Poly, Rational, symbols
 from sympy.polys.matrices import DomainMatrix
 
-from ssaudit.margins.gain_range import find_gain_range, find_stable_gains
+from ssaudit.margins.gain_range import find_gain_range
+from ssaudit.margins.stable_gains import find_stable_gains
 
 K = symbols("k")
 RING = ZZ[K]

@@ -1,7 +1,7 @@
 import numpy as np
 import pytest
 
-from ssaudit.margins.real_radius import attain_real_radius, find_real_radius
+from ssaudit.margins.real_radius import RealCurve, find_real_radius
 from ssaudit.margins.stability_radius import find_stability_radius
 
 
@@ -12,6 +12,27 @@ def stable_models(rng, points, n, dt=0.0):
     if dt:
         return A / (np.abs(poles).max(1) * (1 + margin))[:, None, None]
     return A - (poles.real.max(1) + margin * np.abs(poles).max(1))[:, None, None] * np.eye(n)
+
+
+def attain_real_radius(A, found, dt=0.0):
+    """Real perturbations, hardly larger than the radius, that put a pole on the boundary.
+
+    From the singular vectors at the best γ: Qiu et al., Automatica 31(6), 1995.
+    """
+    n, w, everyone = A.shape[-1], found.frequency * (dt or 1.0), np.arange(len(A))
+    curve = RealCurve(A, dt)
+    _, gamma = curve.tune(everyone, w, np.zeros(len(A)))
+    U, sigma, V = np.linalg.svd(curve.blocks(everyone, w, gamma[:, 0]))
+    u, v = U[:, :, -2], V[:, -2, :]
+    left = np.stack([u[:, :n], u[:, n:]], axis=2)
+    right = np.stack([v[:, :n], v[:, n:]], axis=2)
+    # At a real pole the vectors of the least singular value, with a zero column beside.
+    flat = (w == 0) | (w == np.pi if dt else False)
+    real = np.cos(w[flat]) if dt else np.zeros(flat.sum())
+    U, _, V = np.linalg.svd(real[:, None, None] * np.eye(n) - A[flat])
+    left[flat], right[flat] = 0, 0
+    left[flat, :, 0], right[flat, :, 0] = U[:, :, -1], V[:, -1, :]
+    return sigma[:, -2, None, None] * left @ np.linalg.pinv(right, rcond=1e-9)
 
 
 @pytest.mark.parametrize("dt", [0.0, 0.1])

@@ -3,7 +3,8 @@ import pytest
 from scipy.linalg import expm
 
 from ssaudit.errors import BankError
-from ssaudit.margins.stability_radius import attain_radius, find_stability_radius
+from ssaudit.margins.resolvent import shifted
+from ssaudit.margins.stability_radius import find_stability_radius
 
 
 def stable_models(rng, points, n, dt=0.0):
@@ -13,6 +14,13 @@ def stable_models(rng, points, n, dt=0.0):
     if dt:
         return A / (np.abs(poles).max(1) * (1 + margin))[:, None, None]
     return A - (poles.real.max(1) + margin * np.abs(poles).max(1))[:, None, None] * np.eye(n)
+
+
+def attain_radius(A, found, dt=0.0):
+    """Perturbations as large as the radius that put a pole on the boundary."""
+    state = shifted(A, np.arange(len(A)), found.frequency * (dt or 1.0), dt)
+    U, sigma, V = np.linalg.svd(state)
+    return sigma[:, -1, None, None] * U[:, :, -1:] @ V[:, -1:, :]
 
 
 @pytest.mark.parametrize("k", [0.0, 1.0, 4.0, 1e3])

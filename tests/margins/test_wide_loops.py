@@ -15,7 +15,8 @@ import pytest
 import scipy.linalg
 from flint import arb, fmpq, fmpq_mat, fmpq_poly
 
-from ssaudit.margins.gain_range import find_gain_range, find_stable_gains
+from ssaudit.margins.gain_range import find_gain_range
+from ssaudit.margins.stable_gains import find_stable_gains
 
 # Ends must agree to the stated accuracy; what is beyond 180 dB is no limit.
 AGREE, NO_LIMIT = 1e-6, 1e9

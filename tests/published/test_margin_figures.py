@@ -4,9 +4,10 @@ import numpy as np
 import pytest
 
 from ssaudit.margins.disk import find_disk_margin
-from ssaudit.margins.gain_range import find_gain_range, find_stable_gains
+from ssaudit.margins.gain_range import find_gain_range
 from ssaudit.margins.loop_margins import find_loop_margins
 from ssaudit.margins.stability_radius import find_stability_radius
+from ssaudit.margins.stable_gains import find_stable_gains
 
 
 def make_loop(num, den):
