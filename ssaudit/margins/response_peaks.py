@@ -150,11 +150,7 @@ def _find_peak(
     """
     norm: Norm = ScaledNorm() if structured and system.D.shape[-1] > 1 else PlainNorm()
     if norm.tunable:
-        mapped = to_continuous(given_form(system, dt), dt)
-        levels = _find_levels(mapped, form.poles, norm)
-        off = _entry_size(system, carried, dt)
-        sure = level_set_trusted(mapped, form, levels, norm, off, sampled=dt > 0)
-        peak = _only(levels, sure)
+        peak = _trusted_levels(system, carried, form, norm, dt)
     else:
         peak = cover_peak(form, norm, PEAK_RTOL)
     left = np.nonzero(~peak.confirmed)[0]
@@ -162,16 +158,24 @@ def _find_peak(
         again = to_modes(system[left], carried[left], sampled=dt > 0, steps=CORRECTIONS)
         cover_left(peak, left, again, norm, PEAK_RTOL)
     left = np.nonzero(~peak.confirmed)[0]
-    if len(left):
-        mapped = to_continuous(given_form(system[left], dt), dt)
-        if norm.tunable:
-            levels = Peak(*(column[left] for column in vars(levels).values()))
-        else:
-            levels = _find_levels(mapped, form.poles[left], norm)
-        off = _entry_size(system[left], carried[left], dt)
-        sure = level_set_trusted(mapped, None, levels, norm, off, sampled=dt > 0)
-        fill_in(peak, left, _only(levels, sure))
+    if len(left) and not norm.tunable:
+        fill_in(peak, left, _trusted_levels(system[left], carried[left], form[left], norm, dt))
     return peak
+
+
+def _trusted_levels(
+    system: StateSpace, carried: Real, form: ModalForm, norm: Norm, dt: float
+) -> Peak:
+    """Peaks by level sets where these can be trusted, by quick upper bounds or else by solving."""
+    mapped = to_continuous(given_form(system, dt), dt)
+    levels = _find_levels(mapped, form.poles, norm)
+    off = _entry_size(system, carried, dt)
+    sure = level_set_trusted(mapped, form, levels, norm, off, sampled=dt > 0)
+    rest = np.nonzero(levels.confirmed & ~sure)[0]
+    if len(rest):
+        some = Peak(*(column[rest] for column in vars(levels).values()))
+        sure[rest] = level_set_trusted(mapped[rest], None, some, norm, off[rest], sampled=dt > 0)
+    return _only(levels, sure)
 
 
 def _find_levels(system: StateSpace, poles: Complex, norm: Norm) -> Peak:
