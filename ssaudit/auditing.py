@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 # handing chunks over costs nothing.
 CHUNK_BYTES = 4_000_000
 # Margins take milliseconds a point, so that few points keep a worker busy.
-MARGIN_POINTS = 64
+MARGIN_POINTS = 128
 # Chunks in flight beyond the one that each worker holds.
 AHEAD = 2
 

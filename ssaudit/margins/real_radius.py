@@ -12,6 +12,9 @@ from ssaudit.modes.poles import find_poles, isolate
 
 # Stated accuracy of the radius: no frequency has a value smaller than (1 - REAL_RTOL) of it.
 REAL_RTOL = 1e-6
+# Roundings of the size of sI - A that a radius may be off by. Over up to twelve decades none of some
+# thousand models, whose radius is known, was off by more than 1.4 of them.
+ROUNDINGS = 4.0
 # The eigenproblem has 4 n (sampled: 8 n) rows; beyond 40 states it is no longer worth its time.
 MOST_STATES = 40
 # The best multiplier γ lies in (0, 1]; below e^-SMALLEST_LOG it no longer changes the value.
@@ -38,10 +41,9 @@ def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> 
     Returns
     -------
     StabilityRadius
-        The radius within a relative tolerance of 1e-6 from above, as long as poles lie within five
-        decades. What rounding hides beyond is not examined: of 400 models over ten decades 13 had a
-        radius too large by more than that, at most by 1e-3. Models of more than 40 states get NaN
-        and are not confirmed.
+        The radius within a relative tolerance of 1e-6 from above. Not confirmed where rounding of
+        sI - A may hide more: where the radius is below some 1e-9 of the size of A. Models of more
+        than 40 states get NaN and are not confirmed.
 
     References
     ----------
@@ -69,7 +71,11 @@ def find_real_radius(A: ArrayLike, dt: float = 0.0, *, scaled: bool = False) -> 
         upper = 2 * norm if dt == 0 else np.full(len(chosen), np.pi)
         starts = boundary_frequencies(poles[chosen], dt)
         peak = find_peak(curve, starts, upper, upper / 2, REAL_RTOL)
-        radius[chosen], confirmed[chosen] = 1 / peak.value, peak.confirmed
+        radius[chosen] = 1 / peak.value
+        # Singular values have an absolute error, of the size of their matrix.
+        size = norm + (np.abs(peak.frequency) if dt == 0 else np.sqrt(models.shape[-1]))
+        hidden = ROUNDINGS * np.finfo(float).eps * size * peak.value
+        confirmed[chosen] = peak.confirmed & (hidden <= REAL_RTOL)
         frequency[chosen] = peak.frequency / (dt or 1.0)
     return StabilityRadius(radius, frequency, stable, confirmed)
 
