@@ -12,8 +12,8 @@ from ssaudit.modes.poles import find_poles, isolate
 
 # Stated accuracy of the radius: no frequency has a value smaller than (1 - REAL_RTOL) of it.
 REAL_RTOL = 1e-6
-# Roundings of the size of sI - A that a radius may be off by: over up to twelve decades none of some
-# thousand models with a known radius was off by more than 1.4 of them.
+# Roundings of the size of sI - A that a radius may be off by: over up to twelve decades none of
+# some thousand models with a known radius was off by more than 1.4 of them.
 ROUNDINGS = 4.0
 # The eigenproblem has 4 n (sampled: 8 n) rows; beyond 40 states it is no longer worth its time.
 MOST_STATES = 40
