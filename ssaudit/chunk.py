@@ -13,9 +13,9 @@ from ssaudit.criteria import CROSS_CHECK, STABILITY, Criteria
 from ssaudit.judging import DOUBT, LOST, VOID, Judgement, judge
 from ssaudit.loop.closing import ClosedModels
 from ssaudit.loop.model import SIGNS, Loop
+from ssaudit.modes.entry_errors import closed_loop_entry_error, rounding_error
 from ssaudit.modes.hidden import NO, UNKNOWN, YES
 from ssaudit.modes.neutral import neutral_states
-from ssaudit.modes.radii import closed_loop_entry_error, rounding_error
 from ssaudit.modes.stacked import find_usable_modes
 from ssaudit.outside import seen_from_outside
 from ssaudit.settling import apply_proofs, settle

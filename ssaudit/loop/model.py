@@ -21,7 +21,7 @@ from ssaudit.loop.fitting import find_misfit
 from ssaudit.loop.gains import Gain, arrange
 from ssaudit.loop.parts import EVERY, Part, chain
 from ssaudit.loop.uncertainty import Uncertain, stated_errors
-from ssaudit.modes.radii import rounding_error
+from ssaudit.modes.entry_errors import rounding_error
 from ssaudit.settings import nearest
 
 Floats = NDArray[np.float64]

@@ -15,7 +15,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from ssaudit.errors import SsauditError
 from ssaudit.modes.boxes import critical_corners, expand_closing, rational, reach
-from ssaudit.modes.radii import rounding_error
+from ssaudit.modes.entry_errors import rounding_error
 
 Floats = NDArray[np.float64]
 

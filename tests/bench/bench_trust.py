@@ -18,11 +18,12 @@ import numpy as np
 
 from ssaudit.modes.clusters import balance_scaling, cluster_radii
 from ssaudit.modes.descriptor import descriptor_modes
+from ssaudit.modes.entry_errors import closed_loop_entry_error
 from ssaudit.modes.evidence import cross_check
 from ssaudit.modes.hidden import hidden_modes
 from ssaudit.modes.poles import find_modes
 from ssaudit.modes.proof import prove_stability
-from ssaudit.modes.radii import closed_loop_entry_error, pole_radii
+from ssaudit.modes.radii import pole_radii
 from ssaudit.modes.stacked import find_usable_modes
 
 REPETITIONS = 3

@@ -8,9 +8,10 @@ import pytest
 
 from ssaudit.errors import SsauditError
 from ssaudit.modes.boxes import critical_corners, expand_closing, reach
+from ssaudit.modes.entry_errors import closed_loop_entry_error
 from ssaudit.modes.poles import find_modes
 from ssaudit.modes.proof import BOTH, BOX, EXACT, _close_exactly, prove_points, prove_stability
-from ssaudit.modes.radii import closed_loop_entry_error, pole_radii
+from ssaudit.modes.radii import pole_radii
 
 pytest.importorskip("flint")
 
