@@ -12,6 +12,7 @@ from ssaudit.loop.assembly import OpenLoop
 from ssaudit.loop.breaking import break_loop
 from ssaudit.loop.closing import ClosedModels
 from ssaudit.loop.model import SIGNS, Loop
+from ssaudit.margins.confirmed import only_confirmed
 from ssaudit.margins.disk import find_disk_margin
 from ssaudit.margins.gain_range import GainRange, find_gain_range
 from ssaudit.margins.loop_margins import LoopMargins, find_loop_margins
@@ -177,12 +178,12 @@ def _find_alike(
     at_signals = break_without(opened, K, sign, out, signals=signals)
     both = break_without(opened, K, sign, out, inputs=inputs, signals=signals)
     found = dict(radii)
-    factor = find_gain_range(*_matrices(at_inputs), closed.dt)
+    factor = only_confirmed(find_gain_range(*_matrices(at_inputs), closed.dt))
     decided = factor.confirmed | ~factor.stable
     found["gain_factor_low"] = (factor.low, factor.low_frequency, decided)
     found["gain_factor_high"] = (factor.high, factor.high_frequency, decided)
     for name, broken in (("input", at_inputs), ("output", at_signals), ("both", both)):
-        disk = find_disk_margin(*_matrices(broken), closed.dt)
+        disk = only_confirmed(find_disk_margin(*_matrices(broken), closed.dt))
         decided = disk.confirmed | ~disk.stable
         found[f"disk_margin_{name}"] = (disk.alpha, disk.frequency, decided)
     disks = [found[f"disk_margin_{name}"] for name in ("input", "output", "both")]
@@ -310,12 +311,12 @@ def _matrices(system: StateSpace) -> tuple[Floats, Floats, Floats, Floats]:
 def _radii(A: Floats, dt: float, real: bool) -> Found:
     found: Found = {}
     for end, scaled in (("", False), ("_scaled", True)):
-        radius = find_stability_radius(A, dt, scaled=scaled)
+        radius = only_confirmed(find_stability_radius(A, dt, scaled=scaled))
         decided = radius.confirmed | ~radius.stable
         found[f"stability_radius{end}"] = (radius.radius, radius.frequency, decided)
         name = f"real_stability_radius{end}"
         if real:
-            radius = find_real_radius(A, dt, scaled=scaled)
+            radius = only_confirmed(find_real_radius(A, dt, scaled=scaled))
             decided = radius.confirmed | ~radius.stable
             found[name] = (radius.radius, radius.frequency, decided)
         else:
@@ -347,9 +348,9 @@ def _single(
     return SingleLoop(
         side,
         name,
-        find_loop_margins(*broken, closed.dt, delay=delay),
-        find_gain_range(*whole, closed.dt),
-        find_sensitivity_peaks(*whole, closed.dt),
+        only_confirmed(find_loop_margins(*broken, closed.dt, delay=delay)),
+        only_confirmed(find_gain_range(*whole, closed.dt)),
+        only_confirmed(find_sensitivity_peaks(*whole, closed.dt)),
     )
 
 

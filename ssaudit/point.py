@@ -14,6 +14,7 @@ from ssaudit.distances import SingleLoop, break_without, find_distances, states_
 from ssaudit.errors import SsauditError
 from ssaudit.loop.closing import ClosedModels
 from ssaudit.loop.model import SIGNS, Loop
+from ssaudit.margins.confirmed import only_confirmed
 from ssaudit.margins.stable_gains import StableGains, find_stable_gains
 from ssaudit.modes.gain_derivatives import damping_derivatives, pole_derivatives
 from ssaudit.modes.poles import find_modes
@@ -270,7 +271,7 @@ def _stable_gains(
     inputs = range(len(section.inputs))
     broken = break_without(opened, closed.K, SIGNS[loop.sign], out, inputs=inputs)
     with np.errstate(all="ignore"):  # as for the distances
-        return find_stable_gains(broken.A, broken.B, broken.C, broken.D, closed.dt)
+        return only_confirmed(find_stable_gains(broken.A, broken.B, broken.C, broken.D, closed.dt))
 
 
 def _effects(

@@ -125,6 +125,8 @@ def _whole(report: PointReport) -> list[Text]:
             if not math.isnan(low)
         ]
         text = " and ".join(spans) or "no factor"
+        if not gains.confirmed[0]:
+            text = "factors that rounding leaves open"
         lines.append(one_line(f"all gains by one factor: stable for {text}"))
     if row["verdict"] == "lost":
         return lines
