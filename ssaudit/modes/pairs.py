@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ssaudit.modes.poles import Stacked, isolate
+from ssaudit.modes.poles import isolate
 
 Floats = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
@@ -162,28 +162,6 @@ def inverse_defect(left: Complexes | Floats, right: Complexes | Floats) -> Float
     return defect
 
 
-def find_vectors(A: Floats) -> tuple[Complexes, Complexes, NDArray[np.bool_]]:
-    """Poles and right eigenvectors of each model of a stack.
-
-    Parameters
-    ----------
-    A : (points, n, n) float
-        Closed-loop state matrices [1/s when continuous], all entries finite.
-
-    Returns
-    -------
-    poles, right, failed
-        As from `ssaudit.modes.poles.find_modes`.
-    """
-
-    def vectors(stack: Floats) -> Stacked:
-        poles, right = np.linalg.eig(stack)
-        return np.asarray(poles, dtype=complex), np.asarray(right, dtype=complex)
-
-    (poles, right), failed = isolate(vectors, A)
-    return poles, right, failed
-
-
 def add_left_vectors(poles: Complexes, right: Complexes) -> PairedModes:
     """Find the left vectors that belong to right ones, each conjugate pair once.
 
@@ -194,7 +172,7 @@ def add_left_vectors(poles: Complexes, right: Complexes) -> PairedModes:
     Parameters
     ----------
     poles, right : complex arrays
-        From `find_vectors`, of points with equally many pairs.
+        From `ssaudit.modes.poles.find_vectors`, of points with equally many pairs.
 
     Returns
     -------
@@ -202,6 +180,7 @@ def add_left_vectors(poles: Complexes, right: Complexes) -> PairedModes:
 
     Examples
     --------
+    >>> from ssaudit.modes.poles import find_vectors
     >>> poles, right, _ = find_vectors(np.array([[[0.0, 1.0], [-4.0, 0.0]]]))
     >>> modes = add_left_vectors(poles, right)
     >>> modes.kept, modes.stands_for, (modes.left @ modes.right).round(12)

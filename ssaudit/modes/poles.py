@@ -91,6 +91,40 @@ def find_poles(A: NDArray[np.float64]) -> tuple[NDArray[np.complex128], NDArray[
     return poles, failed
 
 
+def find_vectors(
+    A: NDArray[np.float64],
+) -> tuple[NDArray[np.complex128], NDArray[np.complex128], NDArray[np.bool_]]:
+    """Poles and right eigenvectors of each model of a stack.
+
+    Parameters
+    ----------
+    A : (points, n, n) float
+        Closed-loop state matrices [1/s when continuous], all entries finite.
+
+    Returns
+    -------
+    poles, right, failed
+        As from `find_modes`.
+
+    Examples
+    --------
+    >>> poles, right, failed = find_vectors(np.array([[[-1.0, 0.0], [0.0, -2.0]]]))
+    >>> poles.real, right[0].real
+    (array([[-1., -2.]]), array([[1., 0.],
+           [0., 1.]]))
+    """
+    if A.size == 0:
+        poles, failed = find_poles(A)
+        return poles, np.zeros(A.shape, dtype=complex), failed
+
+    def vectors(stack: NDArray[np.float64]) -> Stacked:
+        poles, right = np.linalg.eig(stack)
+        return np.asarray(poles, dtype=complex), np.asarray(right, dtype=complex)
+
+    (poles, right), failed = isolate(vectors, A)
+    return poles, right, failed
+
+
 def find_modes(
     A: NDArray[np.float64],
 ) -> tuple[
@@ -121,35 +155,8 @@ def find_modes(
     >>> np.allclose(left @ right, np.eye(2))
     True
     """
+    poles, right, failed = find_vectors(A)
     if A.size == 0:
-        empty = np.zeros(A.shape, dtype=complex)
-        return np.zeros(A.shape[:2], dtype=complex), empty, empty, np.zeros(len(A), dtype=bool)
-
-    def vectors(stack: NDArray[np.float64]) -> Stacked:
-        poles, right = np.linalg.eig(stack)
-        return np.asarray(poles, dtype=complex), np.asarray(right, dtype=complex)
-
-    (poles, right), failed = isolate(vectors, A)
-    return poles, right, _left_vectors(poles, right), failed
-
-
-def _left_vectors(
-    poles: NDArray[np.complex128], right: NDArray[np.complex128]
-) -> NDArray[np.complex128]:
-    """Inverse of the right vectors, by real arithmetic at half the cost.
-
-    The columns v and conj(v) of a pair span the same plane as Re v and Im v, and with the rows y
-    and y' of the inverse of [Re v, Im v] the rows of the complex one are (y - iy')/2 and its
-    conjugate.
-    """
-    points, n = poles.shape
-    plane = np.where((poles.imag < 0)[:, None, :], -right.imag, right.real)
-    (inverse,), _ = isolate(lambda stack: (np.linalg.inv(stack),), plane)
-    rows = inverse.reshape(points * n, n)
-    # A pair stands together: y in its first row, y' in its second.
-    first, second = (poles.imag > 0).ravel(), (poles.imag < 0).ravel()
-    place = np.arange(points * n)
-    left = np.empty((points * n, n), dtype=complex)
-    left.real = rows[place - second] * np.where(first | second, 0.5, 1.0)[:, None]
-    left.imag = rows[place + first] * (0.5 * second - 0.5 * first)[:, None]
-    return left.reshape(right.shape)
+        return poles, right, right, failed
+    (left,), _ = isolate(lambda stack: (np.linalg.inv(stack),), right)
+    return poles, right, left, failed

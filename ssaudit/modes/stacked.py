@@ -7,9 +7,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ssaudit.modes.neutral import neutral_states
-from ssaudit.modes.pairs import add_left_vectors, equally_paired, find_vectors
+from ssaudit.modes.pairs import add_left_vectors, equally_paired
 from ssaudit.modes.participation import TOP, participation_of_modes, top_states
-from ssaudit.modes.poles import find_poles
+from ssaudit.modes.poles import find_poles, find_vectors
 from ssaudit.modes.quantities import continuous_poles
 from ssaudit.modes.radii import SLICE_ENTRIES, continuous_radius, paired_radii
 

@@ -8,11 +8,10 @@ from ssaudit.modes.pairs import (
     PairedModes,
     add_left_vectors,
     equally_paired,
-    find_vectors,
     inverse_defect,
     pair_modes,
 )
-from ssaudit.modes.poles import find_modes
+from ssaudit.modes.poles import find_modes, find_vectors
 from ssaudit.modes.radii import paired_radii
 
 
